@@ -1,0 +1,1 @@
+"""What measurements did tell: fit, variance components, model choice."""

@@ -1,0 +1,1 @@
+"""Maps and curves."""

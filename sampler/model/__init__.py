@@ -1,0 +1,1 @@
+"""Distortion as named terms; one basis for fit, predict, plan and figures."""

@@ -1,0 +1,1 @@
+"""Choosing sites; sees arrays, never panels or models."""

@@ -1,0 +1,1 @@
+"""The panel as drawn: outline, grids of cells, keep-outs, marks."""

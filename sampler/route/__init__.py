@@ -1,0 +1,1 @@
+"""Visiting order and seconds."""

@@ -1,0 +1,1 @@
+"""One verb per file, one public function each."""

@@ -1,0 +1,1 @@
+"""What measurements would tell: noise, priors, information, limits."""

@@ -1,0 +1,26 @@
+"""What one reading is worth: standard uncertainties per mark and axis."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from sampler.panel.layout import Sites
+
+
+@dataclass(frozen=True, slots=True)
+class Noise:
+    """`mark_um`: reading one mark once, dx and dy. `local_um`: displacement at a mark that no model term explains."""
+
+    mark_um: tuple[float, float]
+    local_um: tuple[float, float] = (0.0, 0.0)
+
+    def sigma_um(self, sites: Sites) -> NDArray[np.float64]:
+        """Standard uncertainty of each reading as data for the model, (n, 2): reading and local parts in quadrature.
+
+        A mark's own reading sigma, where it has one, replaces `mark_um`.
+        """
+        reading = np.where(np.isnan(sites.sigma_um), np.asarray(self.mark_um), sites.sigma_um)
+        return np.hypot(reading, np.asarray(self.local_um))
