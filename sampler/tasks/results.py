@@ -1,0 +1,119 @@
+"""What the tasks give back: audits and plans, ready for files, figures and reports."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from sampler.panel.candidates import Candidates
+from sampler.panel.layout import Sites
+from sampler.tasks.study import Study
+
+
+@dataclass(frozen=True, slots=True)
+class AuditedLimit:
+    """One limit: `predicted` and `maximum` are k·u in `unit`; `where_mm` is the worst place of a region limit.
+
+    `predicted` is infinite when the sites do not determine the direction at all.
+    """
+
+    label: str
+    maximum: float
+    predicted: float
+    unit: str
+    where_mm: tuple[float, float] | None = None
+    axis: str = ""
+
+    @property
+    def ratio(self) -> float:
+        return self.predicted / self.maximum
+
+
+@dataclass(frozen=True, slots=True)
+class AuditedTerm:
+    """k·u of one term in its unit; `maximum` is NaN when no limit holds it."""
+
+    name: str
+    unit: str
+    k_u: float
+    maximum: float
+
+
+@dataclass(frozen=True, slots=True)
+class PositionMap:
+    """k·u in µm of the predicted position on a raster: `x_mm` (c,), `y_mm` (r,), `k_u_um` (r, c, 2); NaN off the panel."""
+
+    x_mm: NDArray[np.float64]
+    y_mm: NDArray[np.float64]
+    k_u_um: NDArray[np.float64]
+
+
+@dataclass(frozen=True, slots=True)
+class Audit:
+    """What a set of sites would achieve, computed from the sites alone."""
+
+    sites: Sites
+    limits: tuple[AuditedLimit, ...]
+    terms: tuple[AuditedTerm, ...]
+    log_det: float
+    position: PositionMap
+    worst_position: AuditedLimit
+    """The worst predicted position over the panel less its edge exclusion; `maximum` is NaN."""
+
+    @property
+    def meets_limits(self) -> bool:
+        return all(limit.ratio <= 1.0 for limit in self.limits)
+
+    @property
+    def worst(self) -> AuditedLimit:
+        return max(self.limits, key=lambda limit: limit.ratio)
+
+
+@dataclass(frozen=True, slots=True)
+class Plan:
+    """The answer to a study: sites in visiting order with their audit and the proof.
+
+    `status` is "proven", "interval" or "cannot" (then the audit is of all candidates, `advice` says what would help and
+    `audit.sites` holds every candidate). `lower_bound` is on the number of sites.
+    """
+
+    study: Study
+    candidates: Candidates
+    audit: Audit
+    status: str
+    lower_bound: float
+    certificate: dict[str, Any]
+    d_efficiency_at_least: float
+    advice: tuple[str, ...]
+    warnings: tuple[str, ...]
+    seconds: float
+    interrupted: bool = False
+
+    @property
+    def sites(self) -> Sites:
+        return self.audit.sites
+
+    @property
+    def fewest_proven(self) -> bool:
+        return self.status == "proven"
+
+
+@dataclass(frozen=True, slots=True)
+class SiteAudit:
+    """A given site list against its study, and against the fewest plan.
+
+    `droppable`: ids each of which alone could be dropped with every limit still met. `best_to_add`: the id that would
+    lower the worst ratio most, and that ratio, when a limit is missed. `fewest`: the plan that `plan` would give.
+    """
+
+    study: Study
+    candidates: Candidates
+    audit: Audit
+    droppable: tuple[str, ...]
+    best_to_add: tuple[str, float] | None
+    fewest: Plan | None
+    d_efficiency: float
+    warnings: tuple[str, ...]
