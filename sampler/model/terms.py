@@ -74,8 +74,8 @@ TERMS: dict[str, Term] = _table()
 
 
 def _families() -> dict[str, tuple[str, ...]]:
-    affine = ("translation_x", "translation_y", "scale_x", "scale_y", "rotation", "orthogonality")
-    families = {
+    affine: tuple[str, ...] = ("translation_x", "translation_y", "scale_x", "scale_y", "rotation", "orthogonality")
+    families: dict[str, tuple[str, ...]] = {
         "similarity": ("translation_x", "translation_y", "magnification", "rotation"),
         "affine": affine,
         "translation": ("translation_x", "translation_y"),
