@@ -144,7 +144,7 @@ def _as_equal(first: Block, rows: Array, prior: Array) -> Array | None:
     cross = np.zeros((q, q))
     for start in range(0, first.n, CHUNK_ROWS):
         cross += first.rows[start:start + CHUNK_ROWS].reshape(-1, q).T @ rows[start:start + CHUNK_ROWS].reshape(-1, q)
-    turn: Array = np.linalg.lstsq(gram, cross, rcond=None)[0]
+    turn = np.asarray(np.linalg.lstsq(gram, cross, rcond=None)[0], np.float64)
     if np.linalg.cond(turn) > 1e6:
         return None
     scale = np.abs(rows).max(initial=0.0)
