@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass
 from typing import Any
 
@@ -11,6 +12,9 @@ from numpy.typing import NDArray
 from sampler.panel.candidates import Candidates
 from sampler.panel.layout import Sites
 from sampler.tasks.study import Study
+
+# A bound this little above a whole number does not exclude it: solvers and the sum of many rows round.
+BOUND_TOLERANCE = 1e-6
 
 
 @dataclass(frozen=True, slots=True)
@@ -99,6 +103,26 @@ class Plan:
     @property
     def fewest_proven(self) -> bool:
         return self.status == "proven"
+
+    @property
+    def at_least(self) -> int:
+        """The fewest sites that the bound leaves possible; 0 while nothing is known."""
+        return max(0, math.ceil(self.lower_bound - BOUND_TOLERANCE)) if math.isfinite(self.lower_bound) else 0
+
+    @property
+    def answer(self) -> str:
+        """Count and proof in a few words; never "fewest" or "optimal" for more than was proven."""
+        count = len(self.sites)
+        found = f"{count} site" if count == 1 else f"{count} sites"
+        if self.status == "cannot":
+            return "cannot be met"
+        if not self.audit.meets_limits:
+            return f"at least {self.at_least} needed; no set found that meets every limit"
+        if self.fewest_proven:
+            return f"{found}, fewest proven"
+        if self.at_least < count:
+            return f"between {self.at_least} and {found}; best found {count}"
+        return f"{found}, fewest not proven"
 
 
 @dataclass(frozen=True, slots=True)
