@@ -1,0 +1,55 @@
+"""The command line: one command per file, loaded only when it is used."""
+
+from __future__ import annotations
+
+import importlib
+import sys
+
+import click
+
+from sampler import __version__
+from sampler.errors import SamplerError
+
+COMMANDS = {
+    "plan": "the fewest sites that meet a study's limits, with proof, map and site list",
+    "audit": "what sites that you chose achieve, and how far they are from the fewest",
+}
+"""Every command with its one line of help; `sampler/cli/NAME.py` holds it as `command`."""
+
+BAD_INPUT = 1
+CANNOT_BE_MET = 3
+
+
+class Commands(click.Group):
+    """Loads a command's module only when it is asked for, so that help and start-up stay fast."""
+
+    def list_commands(self, ctx: click.Context) -> list[str]:
+        return list(COMMANDS)
+
+    def get_command(self, ctx: click.Context, name: str) -> click.Command | None:
+        if name not in COMMANDS:
+            return None
+        command: click.Command = importlib.import_module(f"sampler.cli.{name}").command
+        return command
+
+    def format_commands(self, ctx: click.Context, formatter: click.HelpFormatter) -> None:
+        with formatter.section("Commands"):
+            formatter.write_dl(list(COMMANDS.items()))
+
+
+@click.command(cls=Commands, context_settings={"help_option_names": ["-h", "--help"], "max_content_width": 100})
+@click.version_option(__version__, package_name="sampler")
+def group() -> None:
+    """Chooses the fewest marks of a panel to measure so that its corrections are certain enough, and proves it.
+
+    Exit status: 0 every limit met; 1 bad input; 2 wrong usage; 3 no set of candidate sites can meet the limits.
+    """
+
+
+def main() -> None:
+    """Entry point; faults of input go to stderr as one message and exit 1."""
+    try:
+        group()
+    except SamplerError as error:
+        click.echo(f"{error}\nNothing was written.", err=True)
+        sys.exit(BAD_INPUT)

@@ -1,0 +1,63 @@
+"""What the commands share: options, the progress line, and a Ctrl-C that ends a search instead of the program."""
+
+from __future__ import annotations
+
+import signal
+import sys
+import time
+from collections.abc import Callable, Iterator
+from contextlib import contextmanager
+from types import FrameType
+from typing import Any
+
+import click
+
+study_argument = click.argument("study", type=click.Path())
+out_option = click.option("--out", required=True, type=click.Path(), metavar="DIR",
+                          help="Folder for the results; an existing result there is replaced whole.")
+json_option = click.option("--json", "as_json", is_flag=True, help="Print the result as JSON instead of text.")
+
+SECONDS_BETWEEN_LINES = 0.2
+
+
+@contextmanager
+def interruptible() -> Iterator[Callable[[], bool]]:
+    """Gives `stop()`, true after Ctrl-C; a second Ctrl-C ends the program as usual."""
+    pressed = False
+
+    def note(number: int, frame: FrameType | None) -> None:
+        nonlocal pressed
+        if pressed:
+            raise KeyboardInterrupt
+        pressed = True
+        click.echo("\nending the search; the best so far is written (Ctrl-C again: end at once, write nothing)", err=True)
+
+    before = signal.signal(signal.SIGINT, note)
+    try:
+        yield lambda: pressed
+    finally:
+        signal.signal(signal.SIGINT, before)
+
+
+def progress_on_terminal() -> Callable[[float, float], None] | None:
+    """A line on stderr with bound and best, rewritten in place; None when stderr is not a terminal."""
+    if not sys.stderr.isatty():
+        return None
+    from sampler.report.summary import progress_line
+
+    began, last = time.monotonic(), 0.0
+
+    def show(bound: float, best: float) -> None:
+        nonlocal last
+        now = time.monotonic()
+        if now - last >= SECONDS_BETWEEN_LINES:
+            last = now
+            click.echo("\r" + progress_line(bound, best, now - began) + "\x1b[K", err=True, nl=False)
+
+    return show
+
+
+def end_progress(show: Callable[..., Any] | None) -> None:
+    """Clears the progress line."""
+    if show is not None:
+        click.echo("\r\x1b[K", err=True, nl=False)
