@@ -48,7 +48,10 @@ class AuditedTerm:
 
 @dataclass(frozen=True, slots=True)
 class PositionMap:
-    """k·u in µm of the predicted position on a raster: `x_mm` (c,), `y_mm` (r,), `k_u_um` (r, c, 2); NaN off the panel."""
+    """k·u in µm of the predicted position on a raster: `x_mm` (c,), `y_mm` (r,), `k_u_um` (r, c, 2).
+
+    NaN off the panel, infinite where the sites do not determine the position.
+    """
 
     x_mm: NDArray[np.float64]
     y_mm: NDArray[np.float64]
