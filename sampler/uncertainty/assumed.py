@@ -1,0 +1,89 @@
+"""What is assumed of a panel: the corrected terms, and beside them what may be there without being corrected.
+
+All of it is one linear model with a prior: θ = corrected terms | potential terms | local field in dx | local field in dy.
+A term without prior has infinite standard deviation; every prior is a visible row here, there is no other ridge.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from sampler.model.basis import Model, Places, design_blocks
+from sampler.panel.layout import Sites
+from sampler.uncertainty.field import LocalField
+from sampler.uncertainty.noise import Noise
+
+Array = NDArray[np.float64]
+
+
+@dataclass(frozen=True, slots=True)
+class Assumed:
+    """`model` is corrected; `sd` (p,) its terms' prior standard deviations in their units, inf for none.
+
+    `potential` (DuMouchel & Jones 1994): terms not corrected but perhaps present, with `potential_sd` (k,). `field`: local
+    correlated distortion.
+    """
+
+    model: Model
+    sd: Array
+    potential: Model = Model(())
+    potential_sd: Array | None = None
+    field: LocalField | None = None
+
+    @classmethod
+    def plain(cls, model: Model) -> Assumed:
+        """Nothing beside the corrected terms, and no prior."""
+        return cls(model, np.full(len(model), np.inf))
+
+    @property
+    def corrected(self) -> int:
+        return len(self.model)
+
+    @property
+    def size(self) -> int:
+        return self.corrected + len(self.potential) + (2 * self.field.rank if self.field else 0)
+
+    @property
+    def interest(self) -> NDArray[np.bool_]:
+        """Which of θ are corrected terms, (size,)."""
+        return np.arange(self.size) < self.corrected
+
+    @property
+    def prior_precision(self) -> Array:
+        """P₀ (size, size)."""
+        sd = [self.sd]
+        if len(self.potential):
+            assert self.potential_sd is not None
+            sd.append(self.potential_sd)
+        if self.field:
+            sd.append(np.ones(2 * self.field.rank))
+        return np.diag(1.0 / np.concatenate(sd) ** 2)
+
+    def blocks(self, at: Places) -> Array:
+        """What each point would read per unit of each of θ, (n, 2, size)."""
+        if self.size == self.corrected:
+            return design_blocks(self.model, at)
+        parts = [design_blocks(self.model, at), design_blocks(self.potential, at)]
+        if self.field:
+            basis = self.field.basis(at.xy_mm)
+            nothing = np.zeros_like(basis)
+            parts += [np.stack([basis * self.field.sigma_um[0], nothing], axis=1),
+                      np.stack([nothing, basis * self.field.sigma_um[1]], axis=1)]
+        return np.concatenate(parts, axis=2)
+
+    def correction(self, at: Places) -> Array:
+        """Directions of the corrections applied at points, (n, 2, size): the corrected terms alone."""
+        if self.size == self.corrected:
+            return design_blocks(self.model, at)
+        return np.concatenate([design_blocks(self.model, at),
+                               np.zeros((len(at), 2, self.size - self.corrected))], axis=2)
+
+    def sigma_um(self, noise: Noise, sites: Sites) -> Array:
+        """Standard uncertainty of each reading, (n, 2): noise, and the share of the field that its directions leave out."""
+        sigma = noise.sigma_um(sites)
+        if self.field is None:
+            return sigma
+        return np.hypot(sigma, np.sqrt(self.field.neglected(sites.xy_mm))[:, None] * np.asarray(self.field.sigma_um))
