@@ -7,12 +7,20 @@ import sys
 import click
 
 from sampler.cli.main import CANNOT_BE_MET
-from sampler.cli.shared import end_progress, interruptible, json_option, out_option, progress_on_terminal, study_argument
+from sampler.cli.shared import (
+    end_progress,
+    interruptible,
+    json_option,
+    out_option,
+    progress_on_terminal,
+    study_argument,
+)
 
 
 @click.command("audit")
 @study_argument
-@click.option("--sites", required=True, type=click.Path(), metavar="FILE.csv", help="The sites to audit: a CSV with an id column.")
+@click.option("--sites", required=True, type=click.Path(), metavar="FILE.csv",
+              help="The sites to audit: a CSV with an id column.")
 @out_option
 @json_option
 def command(study: str, sites: str, out: str, as_json: bool) -> None:

@@ -7,7 +7,14 @@ import sys
 import click
 
 from sampler.cli.main import CANNOT_BE_MET
-from sampler.cli.shared import end_progress, interruptible, json_option, out_option, progress_on_terminal, study_argument
+from sampler.cli.shared import (
+    end_progress,
+    interruptible,
+    json_option,
+    out_option,
+    progress_on_terminal,
+    study_argument,
+)
 
 
 @click.command("plan")

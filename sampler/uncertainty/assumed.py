@@ -18,6 +18,8 @@ from sampler.uncertainty.noise import Noise
 
 Array = NDArray[np.float64]
 
+NO_TERMS = Model(())
+
 
 @dataclass(frozen=True, slots=True)
 class Assumed:
@@ -29,7 +31,7 @@ class Assumed:
 
     model: Model
     sd: Array
-    potential: Model = Model(())
+    potential: Model = NO_TERMS
     potential_sd: Array | None = None
     field: LocalField | None = None
 
