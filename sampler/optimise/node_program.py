@@ -1,0 +1,135 @@
+"""The linear program of a tree node, kept warm in HiGHS: the largest t with every row's Σᵢ wᵢaᵢ + zᵀP₀z ≥ t.
+
+Count rows are elastic, each with its own two slack columns at a price, so that the program always has a solution: what
+prunes a node is the bound recomputed from the multipliers, never the solver's word that there is none.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import highspy
+import numpy as np
+from numpy.typing import NDArray
+
+Array = NDArray[np.float64]
+Indices = NDArray[np.int64]
+
+LARGEST_T = 4.0
+"""t is capped while the rows do not yet bound it."""
+ELASTIC_PRICE = 50.0
+"""What breaking a count row by one site costs, in t; any price gives a valid bound, a small one a weaker bound."""
+
+
+def quiet_highs() -> highspy.Highs:
+    solver = highspy.Highs()
+    solver.silent()
+    solver.setOptionValue("threads", 1)
+    solver.setOptionValue("presolve", "off")
+    return solver
+
+
+@dataclass(frozen=True, slots=True)
+class Solution:
+    """`t`; weights of the program's sites; multipliers of covering rows, of the budget and of the count rows."""
+
+    t: float
+    w: Array
+    y: Array
+    budget: float
+    counts: Array
+
+
+class NodeProgram:
+    """Columns: t, then two slack columns per count row and one column per site, in the order they came.
+
+    `sites`: the candidates that have a column. Rows: the budget Σ cost·w ≤ `budget`, count rows, covering rows.
+    """
+
+    def __init__(self, budget: float) -> None:
+        self.solver = quiet_highs()
+        nothing, none = np.zeros(0, np.int32), np.zeros(0)
+        self.solver.addCol(-1.0, 0.0, LARGEST_T, 0, nothing, none)
+        self.solver.addCol(ELASTIC_PRICE, 0.0, np.inf, 0, nothing, none)
+        self.solver.addRow(-np.inf, budget, 1, np.array([1], np.int32), np.array([-1.0]))
+        self.columns = 2
+        self.site_column: list[int] = []
+        self.sites: list[int] = []
+        self.position: dict[int, int] = {}
+        self.cover_row: list[int] = []
+        self.count_row: list[int] = []
+        self.rows = 1
+
+    def add_sites(self, sites: Indices, cost: Array, coefficients: Array, in_count: Array) -> None:
+        """New sites with their coefficients in the covering rows (rows, s) and membership in the count rows (c, s)."""
+        entries = np.concatenate([cost[None, :], in_count, coefficients])
+        at = np.array([0, *self.count_row, *self.cover_row], np.int32)
+        kept = entries != 0.0
+        start = np.concatenate([[0], np.cumsum(kept.sum(axis=0))[:-1]]).astype(np.int32)
+        row = np.broadcast_to(at[:, None], entries.shape).T[kept.T]
+        size = len(sites)
+        self.solver.addCols(size, np.zeros(size), np.zeros(size), np.ones(size), len(row), start,
+                            np.ascontiguousarray(row, np.int32), np.ascontiguousarray(entries.T[kept.T]))
+        for site in sites:
+            self.position[int(site)] = len(self.sites)
+            self.sites.append(int(site))
+            self.site_column.append(self.columns)
+            self.columns += 1
+
+    def add_cover(self, coefficients: Array, prior: float) -> None:
+        """A covering row Σ a w − t ≥ −prior over the program's sites, (sites,)."""
+        at = np.array([0, *self.site_column], np.int32)
+        self.solver.addRow(-prior, np.inf, len(at), at, np.concatenate([[-1.0], coefficients]))
+        self.cover_row.append(self.rows)
+        self.rows += 1
+
+    def add_count(self, member: Array) -> None:
+        """A count row over the program's sites, (sites,) 0 or 1; without bounds until `set_counts`."""
+        nothing, none = np.zeros(0, np.int32), np.zeros(0)
+        for _ in range(2):
+            self.solver.addCol(ELASTIC_PRICE, 0.0, np.inf, 0, nothing, none)
+        held = np.array(self.site_column, np.int32)[member > 0]
+        at = np.concatenate([np.array([self.columns, self.columns + 1], np.int32), held])
+        self.solver.addRow(-np.inf, np.inf, len(at), at, np.concatenate([[1.0, -1.0], np.ones(len(held))]))
+        self.columns += 2
+        self.count_row.append(self.rows)
+        self.rows += 1
+
+    def set_bounds(self, lower: Array, upper: Array) -> None:
+        """Bounds of the program's sites, (sites,)."""
+        at = np.array(self.site_column, np.int32)
+        self.solver.changeColsBounds(len(at), at, lower.astype(float), upper.astype(float))
+
+    def set_counts(self, lower: Array, upper: Array) -> None:
+        """Bounds of all count rows, (counts,)."""
+        for row, low, high in zip(self.count_row, lower, upper, strict=True):
+            self.solver.changeRowBounds(row, float(low), float(high))
+
+    def solve(self) -> Solution | None:
+        """The optimum, or None when the solver did not report one."""
+        self.solver.run()
+        if self.solver.getModelStatus() != highspy.HighsModelStatus.kOptimal:
+            self.solver.clearSolver()
+            self.solver.run()
+            if self.solver.getModelStatus() != highspy.HighsModelStatus.kOptimal:
+                return None
+        solution = self.solver.getSolution()
+        value, dual = np.array(solution.col_value), np.array(solution.row_dual)
+        t = -self.solver.getInfo().objective_function_value
+        return Solution(t, value[self.site_column], np.maximum(dual[self.cover_row], 0.0), max(-dual[0], 0.0),
+                        -dual[self.count_row])
+
+    def trial(self, member: Array, at_most: int) -> tuple[float, float]:
+        """t with at most, and with more than, `at_most` of the member sites; the program is put back as it was."""
+        basis = self.solver.getBasis()
+        held = np.array(self.site_column, np.int32)[member > 0]
+        self.solver.addRow(-np.inf, at_most, len(held), held, np.ones(len(held)))
+        values = []
+        for low, high in ((-np.inf, at_most), (at_most + 1.0, np.inf)):
+            self.solver.changeRowBounds(self.rows, low, high)
+            self.solver.run()
+            optimal = self.solver.getModelStatus() == highspy.HighsModelStatus.kOptimal
+            values.append(-self.solver.getInfo().objective_function_value if optimal else -ELASTIC_PRICE)
+        self.solver.deleteRows(1, np.array([self.rows], np.int32))
+        self.solver.setBasis(basis)
+        return values[0], values[1]

@@ -1,0 +1,447 @@
+"""Can sites of cost at most n meet every limit? A depth-first tree that branches on counts, with a proof either way.
+
+A node holds 0/1 bounds of the sites and bounds on how many sites lie in some half-spaces. Its relaxation is
+max t subject to Σᵢ wᵢ‖Bᵢz_k‖² + z_kᵀP₀z_k ≥ t for covering rows z_k: t(w) = 1 / (worst variance ratio at w), so a set
+needs t ≥ 1. For any multipliers y ≥ 0 of the rows, μ₀ ≥ 0 of the budget and μ_R of the counts (weak duality),
+
+    t · Σy ≤ Σ y_k z_kᵀP₀z_k + μ₀ n + Σ_R μ_R · (upper count if μ_R > 0, else lower) + Σ_i max(Pᵢ lowerᵢ, Pᵢ upperᵢ),
+    Pᵢ = Σ_k y_k‖Bᵢz_k‖² − μ₀ costᵢ − Σ_{R∋i} μ_R,
+
+over all candidates i. A node is closed only on this number, recomputed here; the same number with Pᵢ fixes sites.
+"""
+
+from __future__ import annotations
+
+import time
+from collections.abc import Callable
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from sampler.optimise.blocks import Split
+from sampler.optimise.branching import HalfSpace, Splits
+from sampler.optimise.gram import Gram, Row, pack
+from sampler.optimise.node_program import NodeProgram, Solution
+from sampler.optimise.problem import SiteProblem
+
+Array = NDArray[np.float64]
+Indices = NDArray[np.int64]
+
+MARGIN = 1e-7
+"""A node is closed or a site fixed only with this much to spare, relative to the terms summed: rounding is far smaller."""
+INTEGRAL = 1e-7
+FEASIBLE = 1.0 - 1e-12
+"""A set counts as found when every variance ratio is at most this."""
+RIDGE = 1e-9
+"""Share of the mean diagonal added to M in the separation step only: any z gives a valid row."""
+FIRST_COLUMNS = 100
+MOST_ROUNDS = 200
+"""Rows or columns are added at most so often in one node before it is branched on as it stands."""
+PROGRAM_ROWS = 160
+PROGRAM_COLUMNS = 400
+"""The program is rebuilt with what was used lately when it holds more than this."""
+
+
+@dataclass(frozen=True, slots=True)
+class Multipliers:
+    """One weak-duality certificate: `y` of pool rows `rows`, `budget` μ₀, `rules` (rule, μ) and `counts` (split, μ)."""
+
+    rows: Indices
+    y: Array
+    budget: float
+    rules: tuple[tuple[int, float], ...]
+    counts: tuple[tuple[int, float], ...]
+
+
+@dataclass(frozen=True, slots=True)
+class Step:
+    """One line of the proof, in preorder: "split" (on `split`, at most `at_most` first), "fix" or "leaf"."""
+
+    kind: str
+    multipliers: Multipliers | None = None
+    split: int = -1
+    at_most: int = 0
+
+
+@dataclass(frozen=True, slots=True)
+class Decision:
+    """`status` "possible" (`chosen` sorted indices meet limits and rules), "impossible" (`certificate`), or "open".
+
+    `bound`: what the tree proved is the same either way: no set of cost ≤ count, or nothing.
+    """
+
+    status: str
+    chosen: Indices | None
+    certificate: dict[str, Any] | None
+    nodes: int
+    seconds: float
+
+
+@dataclass(slots=True)
+class _Node:
+    lower: NDArray[np.int8]
+    upper: NDArray[np.int8]
+    path: tuple[tuple[int, bool, int], ...]  # (split, at most?, count)
+    sites: Indices
+    w: Array  # the parent's weights, on `sites`
+
+
+class Tree:
+    """The search for one count. Sites are in the order of their keys; `order` maps back."""
+
+    def __init__(self, split: Split, problem: SiteProblem, count: float, weights: Array | None = None,
+                 first_columns: int = FIRST_COLUMNS) -> None:
+        self.split, self.problem, self.count = split, problem, float(count)
+        self.order = np.argsort(problem.key, kind="stable")
+        inverse = np.empty_like(self.order)
+        inverse[self.order] = np.arange(len(self.order))
+        self.n = problem.n
+        self.cost = problem.cost[self.order].astype(float)
+        self.blocks = split.blocks
+        self.gram = Gram(split, self.order)
+        self.splits = Splits(split, problem, self.order)
+        self.rules: list[tuple[NDArray[np.bool_], float, float]] = []
+        for members, low, high in zip(problem.rules.members, problem.rules.lower, problem.rules.upper, strict=True):
+            mask = np.zeros(self.n, bool)
+            mask[inverse[members]] = True
+            self.rules.append((mask, float(low), float(high)))
+        if problem.max_sites is not None:
+            self.rules.append((np.ones(self.n, bool), -np.inf, float(problem.max_sites)))
+        self.pool: list[Row] = []
+        self.proof: list[Step] = []
+        self.halves: list[HalfSpace] = []
+        self.masks: list[NDArray[np.bool_]] = []
+        self.nodes = 0
+        self.undecided = False
+        lower = problem.required[self.order].astype(np.int8)
+        upper = np.maximum(~problem.forbidden[self.order], lower).astype(np.int8)
+        free = np.flatnonzero(upper)
+        rng = np.random.default_rng(0)
+        first = rng.permutation(free)[:first_columns]
+        if weights is not None:
+            heavy = np.argsort(-weights[self.order], kind="stable")[:first_columns]
+            first = np.concatenate([heavy[weights[self.order][heavy] > 0], first])
+        first = np.unique(np.concatenate([np.flatnonzero(lower), first[:max(first_columns, 1)]]))
+        self.held: list[int] = []          # pool rows in the program
+        self.counted: list[int] = []       # splits in the program
+        self.program = NodeProgram(self.count)
+        self._build(first, [], [])
+        w = np.full(len(free), min(1.0, self.count / max(len(free), 1)))
+        self.stack = [_Node(lower, upper, (), free, w)]
+
+    # -- the program -------------------------------------------------------------------------------------------------
+
+    def _build(self, sites: Indices, rows: list[int], splits: list[int]) -> None:
+        self.program = NodeProgram(self.count)
+        self.held, self.counted = rows, splits
+        self.program.add_sites(sites, self.cost[sites], np.zeros((0, len(sites))), np.zeros((0, len(sites))))
+        for mask, _, _ in self.rules:
+            self.program.add_count(mask[sites])
+        for split in splits:
+            self.program.add_count(self.masks[split][sites])
+        for row in rows:
+            self.program.add_cover(self.gram.coefficients(self.pool[row].packed, sites), self.pool[row].prior)
+        self.row_used = [self.nodes] * len(rows)
+        self.site_used = np.full(len(sites), self.nodes)
+
+    def _purge(self, path: tuple[tuple[int, bool, int], ...]) -> None:
+        """Rebuild the program from what recent nodes used."""
+        on_path = [split for split, _, _ in path]
+        program = self.program
+        if not (len(self.held) > PROGRAM_ROWS or len(program.sites) > PROGRAM_COLUMNS
+                or len(self.counted) > len(on_path) + 30):
+            return
+        newest = np.sort(np.array(self.row_used))[::-1]
+        row_from = newest[min(PROGRAM_ROWS // 2, len(newest) - 1)] if len(newest) else 0
+        used = np.sort(self.site_used)[::-1]
+        site_from = used[min(PROGRAM_COLUMNS // 2, len(used) - 1)]
+        rows = [row for row, when in zip(self.held, self.row_used, strict=True) if when >= row_from]
+        sites = np.array(program.sites)[self.site_used >= site_from]
+        self._build(sites, rows[-PROGRAM_ROWS // 2:], on_path)
+
+    def _add_row(self, row: Row) -> None:
+        sites = np.array(self.program.sites)
+        self.program.add_cover(self.gram.coefficients(row.packed, sites), row.prior)
+        self.held.append(len(self.pool))
+        self.row_used.append(self.nodes)
+        self.pool.append(row)
+
+    def _add_sites(self, sites: Indices) -> None:
+        coefficients = self.gram.coefficients(np.stack([self.pool[row].packed for row in self.held], axis=1), sites) \
+            if self.held else np.zeros((len(sites), 0))
+        masks = [mask for mask, _, _ in self.rules] + [self.masks[split] for split in self.counted]
+        counts = np.stack([mask[sites] for mask in masks]).astype(float) if masks else np.zeros((0, len(sites)))
+        self.program.add_sites(sites, self.cost[sites], coefficients.T, counts)
+        self.site_used = np.concatenate([self.site_used, np.full(len(sites), self.nodes)])
+
+    def _enter(self, node: _Node) -> None:
+        """Set the program to a node's bounds."""
+        self._purge(node.path)
+        for split, _, _ in node.path:
+            if split not in self.counted:
+                self.program.add_count(self.masks[split][self.program.sites])
+                self.counted.append(split)
+        low, high = self._counts(node)
+        self.program.set_counts(low, high)
+        self.program.set_bounds(node.lower[self.program.sites], node.upper[self.program.sites])
+
+    def _counts(self, node: _Node) -> tuple[Array, Array]:
+        """Bounds of the program's count rows at a node; several bounds on one split keep the tightest."""
+        low = np.full(len(self.rules) + len(self.counted), -np.inf)
+        high = np.full(len(low), np.inf)
+        for index, (_, least, most) in enumerate(self.rules):
+            low[index], high[index] = least, most
+        place = {split: len(self.rules) + index for index, split in enumerate(self.counted)}
+        for split, at_most, count in node.path:
+            if at_most:
+                high[place[split]] = min(high[place[split]], count)
+            else:
+                low[place[split]] = max(low[place[split]], count)
+        return low, high
+
+    # -- rows --------------------------------------------------------------------------------------------------------
+
+    def _variances(self, sites: Indices, w: Array) -> tuple[Array, list[Array]]:
+        """Variance ratio of each limit at weights w on `sites`, and M_b⁻¹C_b of each block."""
+        solved, variance = [], []
+        for block in self.blocks:
+            here = block.rows[self.order[sites]]
+            information = block.prior + np.einsum("i,imp,imq->pq", w, here, here, optimize=True)
+            ridge = RIDGE * np.trace(information) / max(block.q, 1) + 1e-14
+            part = np.linalg.solve(information + ridge * np.eye(block.q), block.columns)
+            solved.append(part)
+            variance.append(np.einsum("qk,qk->k", block.columns, part))
+        return self.split.variances(variance), solved
+
+    def _new_rows(self, ratios: Array, solved: list[Array], most: int = 3, least_ratio: float = 1.0) -> list[Row]:
+        """Rows of the worst limits, none nearly parallel to a worse one (correlation of the two estimates > 0.9)."""
+        rows: list[Row] = []
+        leads: list[tuple[int, Array]] = []
+        worst = np.argsort(-ratios, kind="stable")[:200]
+        for limit in worst:
+            if rows and (len(rows) == most or ratios[limit] < max(least_ratio, 0.5 * ratios[worst[0]])):
+                break
+            z, columns = [], []
+            for block, part in zip(self.blocks, solved, strict=True):
+                mine = np.flatnonzero(block.owner == limit)
+                columns.append(mine)
+                z.append(part[:, mine] / ratios[limit])
+            sizes = [np.einsum("qk,qk->", block.columns[:, mine], part)
+                     for block, mine, part in zip(self.blocks, columns, z, strict=True)]
+            lead = int(np.argmax(sizes))
+            column = self.blocks[lead].columns[:, columns[lead][0]]
+            if any(home == lead and (column @ other) ** 2 > 0.81 * (column @ z[lead][:, 0]) * size
+                   for home, other, size in leads):  # type: ignore[misc]
+                continue
+            leads.append((lead, z[lead][:, 0], float(column @ z[lead][:, 0])))  # type: ignore[arg-type]
+            squares = [part @ part.T for part in z]
+            rows.append(Row(int(limit), tuple(z), tuple(columns), np.concatenate([pack(q) for q in squares]),
+                            float(sum((q * block.prior).sum() for q, block in zip(squares, self.blocks, strict=True)))))
+        return rows
+
+    # -- the bound ---------------------------------------------------------------------------------------------------
+
+    def _price(self, node: _Node, solution: Solution) -> tuple[float, Array, float, Multipliers]:
+        """Slack = Σy − (right side of the module's inequality), Pᵢ of all sites, and the margin slack must exceed.
+
+        Positive slack closes the node; slack − Pᵢ > 0 for a free site with Pᵢ < 0 means wᵢ = 0, slack + Pᵢ > 0 with
+        Pᵢ > 0 means wᵢ = 1.
+        """
+        low, high = self._counts(node)
+        mu = solution.counts
+        mu = np.where(mu > 0, np.where(np.isfinite(high), mu, 0.0), np.where(np.isfinite(low), mu, 0.0))
+        y = solution.y
+        packed, prior = np.zeros(self.gram.width), 0.0
+        active = np.flatnonzero(y > 0)
+        for index in active:
+            packed += y[index] * self.pool[self.held[index]].packed
+            prior += y[index] * self.pool[self.held[index]].prior
+            self.row_used[index] = self.nodes
+        price = self.gram.coefficients(packed)
+        price -= solution.budget * self.cost
+        value = prior + solution.budget * self.count
+        scale = abs(prior) + solution.budget * self.count + y.sum()
+        rules, counts = [], []
+        for index in np.flatnonzero(mu):
+            mask = self.rules[index][0] if index < len(self.rules) else self.masks[self.counted[index - len(self.rules)]]
+            price[mask] -= mu[index]
+            bound = high[index] if mu[index] > 0 else low[index]
+            value += mu[index] * bound
+            scale += abs(mu[index]) * max(abs(bound), 1.0)
+            if index < len(self.rules):
+                rules.append((int(index), float(mu[index])))
+            else:
+                counts.append((self.counted[index - len(self.rules)], float(mu[index])))
+        value += np.maximum(price * node.lower, price * node.upper).sum()
+        multipliers = Multipliers(np.array([self.held[index] for index in active], np.int64), y[active],
+                                  solution.budget, tuple(rules), tuple(counts))
+        return float(y.sum() - value), price, MARGIN * scale, multipliers
+
+    def _fix(self, node: _Node, slack: float, price: Array, margin: float, multipliers: Multipliers) -> bool:
+        """Fix what the prices decide; whether a site went in (the program's optimum is then another)."""
+        free = node.lower < node.upper
+        out = free & (slack - price > margin) & (price < 0)
+        into = free & (slack + price > margin) & (price > 0)
+        if not (out.any() or into.any()):
+            return False
+        node.upper = np.where(out, 0, node.upper).astype(np.int8)
+        node.lower = np.where(into, 1, node.lower).astype(np.int8)
+        self.proof.append(Step("fix", multipliers))
+        return bool(into.any())
+
+    # -- one node ----------------------------------------------------------------------------------------------------
+
+    def _close(self, node: _Node, stop: Callable[[], bool]) -> tuple[Indices, Array] | Indices | None:
+        """Work on a node: None when closed, sorted chosen sites when a set is found, else (sites, weights) to branch."""
+        self._enter(node)
+        centre: tuple[Indices, Array] | None = (node.sites, node.w)
+        best_ratio = np.inf
+        last_t = np.inf
+        slow = 0
+        for _ in range(MOST_ROUNDS):
+            if stop():
+                break
+            solution = self.program.solve()
+            sites = np.array(self.program.sites)
+            if solution is None:
+                break
+            w = np.clip(solution.w, node.lower[sites], node.upper[sites])
+            self.site_used[w > INTEGRAL] = self.nodes
+            if solution.t < 1.0:
+                slack, price, margin, multipliers = self._price(node, solution)
+                if slack > margin:
+                    self.proof.append(Step("leaf", multipliers))
+                    return None
+                fresh = self._entering(node, price)
+                if len(fresh):
+                    self._add_sites(fresh)
+                    at = np.array(self.program.sites)
+                    self.program.set_bounds(node.lower[at], node.upper[at])
+                    continue
+            kept = w > 1e-12
+            sites, w = sites[kept], w[kept]
+            ratios, solved = self._variances(sites, w)
+            worst = float(ratios.max(initial=0.0))
+            found = self._found(sites, w)
+            if found is not None:
+                return found
+            if worst <= 1.0:
+                return sites, w
+            rows = self._new_rows(ratios, solved)
+            if centre is not None:
+                middle = np.union1d(sites, centre[0])
+                weight = np.zeros(self.n)
+                weight[sites] += 0.5 * w
+                weight[centre[0]] += 0.5 * centre[1]
+                ratios, solved = self._variances(middle, weight[middle])
+                rows += self._new_rows(ratios, solved)
+                if ratios.max(initial=0.0) < best_ratio:
+                    best_ratio, centre = float(ratios.max(initial=0.0)), (middle, weight[middle])
+            for row in rows:
+                self._add_row(row)
+            slow = slow + 1 if last_t - solution.t < 0.02 * (solution.t - 1.0) else 0
+            last_t = solution.t
+            if slow >= 4:
+                break
+        return sites, w
+
+    def _entering(self, node: _Node, price: Array) -> Indices:
+        """Sites to give a column: the best priced, no two nearly alike."""
+        good = price > 0
+        good[self.program.sites] = False
+        good &= node.upper > 0
+        at = np.flatnonzero(good)
+        if not len(at):
+            return at
+        at = at[np.argsort(-price[at], kind="stable")][:60]
+        packed = self.gram.of(at)
+        packed = packed / np.linalg.norm(packed, axis=1, keepdims=True)
+        alike = packed @ packed.T > 0.998
+        kept: list[int] = []
+        for index in range(len(at)):
+            if not alike[index, kept].any():
+                kept.append(index)
+        return at[kept]
+
+    def _found(self, sites: Indices, w: Array) -> Indices | None:
+        if (np.abs(w - np.rint(w)) > INTEGRAL).any():
+            return None
+        chosen = np.sort(self.order[sites[w > 0.5]])
+        mask = np.zeros(self.n, bool)
+        mask[sites[w > 0.5]] = True
+        if mask @ self.cost > self.count + 1e-9 or not all(low <= (mask & rule).sum() <= high
+                                                           for rule, low, high in self.rules):
+            return None
+        return chosen if self.split.ratios(chosen).max(initial=0.0) <= FEASIBLE else None
+
+    def run(self, stop: Callable[[], bool]) -> tuple[str, Indices | None]:
+        while self.stack:
+            if stop():
+                return "open", None
+            node = self.stack.pop()
+            self.nodes += 1
+            outcome = self._close(node, stop)
+            if outcome is None:
+                continue
+            if isinstance(outcome, np.ndarray):
+                return "possible", outcome
+            if stop():
+                return "open", None
+            self._branch(node, *outcome)
+        return ("open" if self.undecided else "impossible"), None
+
+    def _branch(self, node: _Node, sites: Indices, w: Array) -> None:
+        solution = self.program.solve()
+        if solution is not None:
+            slack, price, margin, multipliers = self._price(node, solution)
+            self._fix(node, slack, price, margin, multipliers)
+        half = self._best_split(node, sites, w)
+        if half is None:
+            self.undecided = True
+            return
+        self.halves.append(half)
+        self.masks.append(half.mask)
+        split = len(self.halves) - 1
+        self.proof.append(Step("split", None, split, half.at_most))
+        for at_most, count in ((False, half.at_most + 1), (True, half.at_most)):
+            self.stack.append(_Node(node.lower.copy(), node.upper.copy(), (*node.path, (split, at_most, count)),
+                                    sites, w))
+
+    def _best_split(self, node: _Node, sites: Indices, w: Array) -> HalfSpace | None:
+        """Strong branching: the split whose two children lose most t, among the best scored."""
+        options = self.splits.propose(sites, w, self._worst(sites, w))
+        if not options:
+            return None
+        at = self.program.sites
+        best, best_score = None, -np.inf
+        for half in options:
+            low, high = self.program.trial(half.mask[at], half.at_most)
+            score = min(low, high) * 0.2 + max(low, high)
+            if -score > best_score:
+                best, best_score = half, -score
+        return best
+
+    def _worst(self, sites: Indices, w: Array) -> list[tuple[int, Array]]:
+        """(block, z) of the worst limits at w: directions that suggest half-spaces."""
+        ratios, solved = self._variances(sites, w)
+        worst = []
+        for row in self._new_rows(ratios, solved, 3, 0.0):
+            for block, z in enumerate(row.z):
+                worst += [(block, z[:, k]) for k in range(z.shape[1])]
+        return worst
+
+
+def decide(split: Split, problem: SiteProblem, count: float, *, rows: Any = None, weights: Array | None = None,
+           seconds: float = np.inf, stop: Callable[[], bool] | None = None,
+           progress: Callable[[float, float], None] | None = None, processes: int = 1) -> Decision:
+    """Whether sites of total cost ≤ count meet every limit and rule: found, proven impossible, or open when time ends."""
+    started = time.monotonic()
+
+    def ended() -> bool:
+        return time.monotonic() - started > seconds or (stop is not None and stop())
+
+    tree = Tree(split, problem, count, weights)
+    status, chosen = tree.run(ended)
+    return Decision(status, chosen, None, tree.nodes, time.monotonic() - started)
