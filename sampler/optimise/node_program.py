@@ -12,6 +12,8 @@ import highspy
 import numpy as np
 from numpy.typing import NDArray
 
+from sampler.optimise.solver import quiet_highs
+
 Array = NDArray[np.float64]
 Indices = NDArray[np.int64]
 
@@ -19,14 +21,6 @@ LARGEST_T = 4.0
 """t is capped while the rows do not yet bound it."""
 ELASTIC_PRICE = 50.0
 """What breaking a count row by one site costs, in t; any price gives a valid bound, a small one a weaker bound."""
-
-
-def quiet_highs() -> highspy.Highs:
-    solver = highspy.Highs()
-    solver.silent()
-    solver.setOptionValue("threads", 1)
-    solver.setOptionValue("presolve", "off")
-    return solver
 
 
 @dataclass(frozen=True, slots=True)
@@ -48,6 +42,7 @@ class NodeProgram:
 
     def __init__(self, budget: float) -> None:
         self.solver = quiet_highs()
+        self.solver.setOptionValue("presolve", "off")
         nothing, none = np.zeros(0, np.int32), np.zeros(0)
         self.solver.addCol(-1.0, 0.0, LARGEST_T, 0, nothing, none)
         self.solver.addCol(ELASTIC_PRICE, 0.0, np.inf, 0, nothing, none)
