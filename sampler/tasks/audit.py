@@ -82,7 +82,7 @@ def _best_to_add(asked: Question, rows: NDArray[np.int64]) -> tuple[str, float] 
     if not len(free):
         return None
     total = information(asked.whitened)
-    inverse = np.linalg.inv(information(asked.whitened[rows]) + START_RIDGE * total)
+    inverse = np.linalg.inv(information(asked.whitened[rows], asked.assumed.prior_precision) + START_RIDGE * total)
     columns = asked.limits.directions.T / asked.limits.tau
     g = inverse @ columns
     variance = (columns * g).sum(axis=0)

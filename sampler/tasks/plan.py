@@ -117,7 +117,7 @@ def _between(asked: Question, chosen: NDArray[np.int64]) -> Limits | None:
             continue
         worst = worst_of(asked, knowledge, source)
         if asked.study.coverage_factor * worst.u_um > limit.position_um * MEETS:
-            rows.append(region_rows(asked.study, source, RegionPoints(
+            rows.append(region_rows(asked.study, asked.assumed, source, RegionPoints(
                 np.array([worst.xy_mm]), {name: np.array([cell]) for name, cell in worst.cell.items()})))
     return stack(rows) if rows else None
 

@@ -8,12 +8,14 @@ import numpy as np
 from numpy.typing import NDArray
 
 from sampler.errors import InputError
-from sampler.model.basis import design_blocks, places
+from sampler.model.basis import places
 from sampler.optimise.problem import SiteProblem, site_problem
 from sampler.panel.candidates import Candidates, candidates
-from sampler.panel.region import RegionPoints
+from sampler.panel.region import RegionPoints, inside_region
 from sampler.tasks.results import Audit, AuditedLimit, AuditedTerm, PositionMap
 from sampler.tasks.study import RegionLimit, Study, TermLimit
+from sampler.uncertainty.assumed import NO_TERMS, Assumed
+from sampler.uncertainty.field import local_field
 from sampler.uncertainty.information import Knowledge, information, whiten
 from sampler.uncertainty.limits import Limits, stack
 from sampler.uncertainty.position import WorstPlace, position_u, raster, worst_place
@@ -24,14 +26,18 @@ Array = NDArray[np.float64]
 SEARCH_STEPS = 40
 """Raster steps along the longer side of a region for the rows that the search holds; what lies between is audited."""
 MAP_STEPS = 100
+SMALLEST_SHARE = 1e-3
+"""Where the fixed part of a displacement alone exceeds its limit, this share of the limit stands for "cannot be met"."""
 
 
 @dataclass(frozen=True, slots=True)
 class Question:
-    """`whitened` (n, 2, p): the candidates' readings. `limits`: the rows that the search holds; a region's rows are a
+    """`assumed`: the corrected terms and what may be there beside them, p of them in all. `whitened` (n, 2, p): the
+    candidates' readings. `limits`: the rows that the search holds; a region's rows are a
     raster, and `rasters` holds the finer one on which its worst place is sought (by region and polygon position)."""
 
     study: Study
+    assumed: Assumed
     candidates: Candidates
     whitened: Array
     limits: Limits
@@ -51,64 +57,86 @@ def question(study: Study) -> Question:
         raise InputError(f"{study.layout_source.path or study.layout.name}: no mark may be measured "
                          f"({'; '.join(f'{n} {why}' for why, n in found.counts().items()) or 'the layout has none'}); "
                          "add marks, or shrink keep-outs or the edge exclusion")
-    whitened = whiten(design_blocks(study.model, places(study.layout, sites.xy_mm)), study.noise.sigma_um(sites))
-    groups = inseparable(information(whitened))
+    assumed = assumed_of(study)
+    whitened = whiten(assumed.blocks(places(study.layout, sites.xy_mm)), assumed.sigma_um(study.noise, sites))
+    groups = inseparable(information(whitened, assumed.prior_precision))
     if groups:
         where = study.source.path or study.title
         raise InputError([f"{where}: [model] {sentence}" for sentence in in_words(groups, study.model.names)])
     rasters = {source: raster(study.layout, limit.region, limit.polygon_mm)
                for source, limit in enumerate(study.limits) if isinstance(limit, RegionLimit)}
-    return Question(study, found, whitened, limit_rows(study), rasters, raster(study.layout, "panel"))
+    return Question(study, assumed, found, whitened, limit_rows(study, assumed), rasters, raster(study.layout, "panel"))
 
 
-def limit_rows(study: Study) -> Limits:
+def assumed_of(study: Study) -> Assumed:
+    """The study's corrected terms with their priors, its potential terms and its local field."""
+    sd = np.full(len(study.model), np.inf)
+    for prior in study.priors:
+        sd[[study.model.names.index(name) for name in prior.terms]] = prior.sd
+    field = None
+    if study.noise.local_range_mm and max(study.noise.local_um) > 0:
+        field = local_field(study.layout.width_mm, study.layout.height_mm, study.noise.local_range_mm, study.noise.local_um)
+    if study.potential is None:
+        return Assumed(study.model, sd, NO_TERMS, None, field)
+    return Assumed(study.model, sd, study.potential.terms, np.full(len(study.potential.terms), study.potential.sd_um), field)
+
+
+def limit_rows(study: Study, assumed: Assumed) -> Limits:
     """The study's limits as rows: one per limited term, two (dx, dy) per raster point of each region."""
-    return stack([_term_rows(study, source, limit) if isinstance(limit, TermLimit)
-                  else region_rows(study, source, raster(study.layout, limit.region, limit.polygon_mm, SEARCH_STEPS))
+    return stack([_term_rows(study, assumed, source, limit) if isinstance(limit, TermLimit)
+                  else region_rows(study, assumed, source, raster(study.layout, limit.region, limit.polygon_mm, SEARCH_STEPS))
                   for source, limit in enumerate(study.limits)])
 
 
-def _term_rows(study: Study, source: int, limit: TermLimit) -> Limits:
+def _term_rows(study: Study, assumed: Assumed, source: int, limit: TermLimit) -> Limits:
     columns = [study.model.names.index(name) for name in limit.terms]
     count = len(columns)
-    return Limits(np.eye(len(study.model))[columns], np.full(count, limit.maximum),
+    return Limits(np.eye(assumed.size)[columns], np.full(count, limit.maximum),
                   tuple(study.model.units[column] for column in columns), limit.terms, np.full(count, source),
                   np.full((count, 2), np.nan), np.full(count, -1), study.coverage_factor)
 
 
-def region_rows(study: Study, source: int, points: RegionPoints) -> Limits:
-    """The dx and dy rows of a region limit at the given points."""
+def region_rows(study: Study, assumed: Assumed, source: int, points: RegionPoints) -> Limits:
+    """The dx and dy rows of a region limit at the given points.
+
+    The share of a local field that its directions leave out is a fixed part of a displacement's variance: the rest of the
+    limit is what the directions may use.
+    """
     limit = study.limits[source]
     assert isinstance(limit, RegionLimit)
-    rows = design_blocks(study.model, places(study.layout, points.xy_mm, points.cell)).reshape(-1, len(study.model))
+    rows = assumed.position(places(study.layout, points.xy_mm, points.cell), limit.of).reshape(-1, assumed.size)
+    fixed = study.coverage_factor * assumed.fixed_um(points.xy_mm, limit.of).ravel()
+    maximum = np.sqrt(np.maximum(limit.position_um**2 - fixed**2, (SMALLEST_SHARE * limit.position_um) ** 2))
     seen = (rows != 0).any(axis=1)  # outside a grid its terms predict nothing, and nothing is certain
     count = len(rows)
     label = region_label(limit)
-    return Limits(rows[seen], np.full(count, limit.position_um)[seen], ("µm",) * int(seen.sum()),
+    return Limits(rows[seen], maximum[seen], ("µm",) * int(seen.sum()),
                   (label,) * int(seen.sum()), np.full(count, source)[seen], np.repeat(points.xy_mm, 2, axis=0)[seen],
                   np.tile([0, 1], len(points.xy_mm))[seen], study.coverage_factor)
 
 
 def region_label(limit: RegionLimit) -> str:
-    return {"panel": "position over the panel", "marks": "position at the marks",
-            "polygon": "position in the polygon"}.get(limit.region, f"position in the cells of "
-                                                      f"{limit.region.removeprefix('cells:')}")
+    words = {"panel": "position over the panel", "marks": "position at the marks",
+            "polygon": "position in the polygon"}
+    said = words.get(limit.region, f"position in the cells of {limit.region.removeprefix('cells:')}")
+    return said if limit.of == "correction" else said.replace("position", "displacement")
 
 
 def problem_of(asked: Question, limits: Limits | None = None) -> SiteProblem:
     """The question as the optimiser sees it; `limits` replaces the raster's rows when more have been added."""
     limits = asked.limits if limits is None else limits
     rules, ids = asked.study.rules, asked.candidates.sites.id
-    return site_problem(asked.whitened, limits.directions, limits.tau, required=np.isin(ids, rules.required),
-                        forbidden=np.isin(ids, rules.forbidden), key=ids, max_sites=rules.max_sites)
+    return site_problem(asked.whitened, limits.directions, limits.tau, prior_precision=asked.assumed.prior_precision,
+                        required=np.isin(ids, rules.required), forbidden=np.isin(ids, rules.forbidden), key=ids,
+                        interest=asked.assumed.interest, max_sites=rules.max_sites)
 
 
 def worst_of(asked: Question, knowledge: Knowledge, source: int) -> WorstPlace:
     """The worst place of the study's region limit `source`."""
     limit = asked.study.limits[source]
     assert isinstance(limit, RegionLimit)
-    return worst_place(asked.study.model, asked.study.layout, knowledge, limit.region, limit.polygon_mm,
-                       asked.rasters[source])
+    return worst_place(asked.assumed, asked.study.layout, knowledge, limit.region, limit.polygon_mm,
+                       asked.rasters[source], limit.of)
 
 
 def limits_achieved(asked: Question, knowledge: Knowledge) -> tuple[AuditedLimit, ...]:
@@ -129,7 +157,7 @@ def limits_achieved(asked: Question, knowledge: Knowledge) -> tuple[AuditedLimit
 
 def knowledge_of(asked: Question, rows: NDArray) -> Knowledge:
     """What the given candidates (indices or mask) tell."""
-    return Knowledge.of(information(asked.whitened[rows]))
+    return Knowledge.of(information(asked.whitened[rows], asked.assumed.prior_precision))
 
 
 def achieved(asked: Question, rows: NDArray[np.int64]) -> Audit:
@@ -141,24 +169,24 @@ def achieved(asked: Question, rows: NDArray[np.int64]) -> Audit:
     for limit in study.limits:
         if isinstance(limit, TermLimit):
             held |= {name: min(limit.maximum, held.get(name, np.inf)) for name in limit.terms}
-    u = factor * np.sqrt(knowledge.variance(np.eye(len(study.model))))
-    terms = tuple(AuditedTerm(name, unit, float(value), held.get(name, np.nan))
-                  for name, unit, value in zip(study.model.names, study.model.units, u, strict=True))
-    worst = worst_place(study.model, study.layout, knowledge, "panel", None, asked.panel_raster)
-    return Audit(asked.candidates.sites.take(rows), limits, terms, knowledge.log_det(), _position_map(study, knowledge),
-                 AuditedLimit("position over the panel", np.nan, factor * worst.u_um, "µm", worst.xy_mm,
-                              ("dx", "dy")[worst.axis]))
+    u = factor * np.sqrt(knowledge.variance(np.eye(asked.assumed.size)[:asked.assumed.corrected]))
+    bias = asked.assumed.bias(asked.whitened[rows])
+    terms = tuple(AuditedTerm(name, unit, float(value), held.get(name, np.nan), float(shift))
+                  for name, unit, value, shift in zip(study.model.names, study.model.units, u, bias, strict=True))
+    worst = worst_place(asked.assumed, study.layout, knowledge, "panel", None, asked.panel_raster)
+    worst_position = AuditedLimit("position over the panel", np.nan, factor * worst.u_um, "µm", worst.xy_mm,
+                                  ("dx", "dy")[worst.axis])
+    return Audit(asked.candidates.sites.take(rows), limits, terms, knowledge.log_det(asked.assumed.interest),
+                 _position_map(asked, knowledge), worst_position)
 
 
-def _position_map(study: Study, knowledge: Knowledge) -> PositionMap:
-    from sampler.panel.region import inside_region
-
-    layout = study.layout
+def _position_map(asked: Question, knowledge: Knowledge) -> PositionMap:
+    study, layout = asked.study, asked.study.layout
     half = np.asarray(layout.half_mm)
     counts = np.maximum(2, np.rint(MAP_STEPS * half / half.max()).astype(int) + 1)
     x, y = (np.linspace(-half[axis], half[axis], counts[axis]) for axis in (0, 1))
     xy = np.stack(np.meshgrid(x, y), axis=-1).reshape(-1, 2)
     inside = inside_region(layout, "panel", None, xy)
     k_u = np.full((len(xy), 2), np.nan)
-    k_u[inside] = study.coverage_factor * position_u(study.model, layout, knowledge, xy[inside])
+    k_u[inside] = study.coverage_factor * position_u(asked.assumed, layout, knowledge, xy[inside])
     return PositionMap(x, y, k_u.reshape(len(y), len(x), 2))

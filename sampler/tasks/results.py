@@ -17,11 +17,17 @@ from sampler.tasks.study import Study
 BOUND_TOLERANCE = 1e-6
 
 
+def whole_sites(bound: float) -> int:
+    """The fewest sites that a lower bound on their number leaves possible; 0 while nothing is known."""
+    return max(0, math.ceil(bound - BOUND_TOLERANCE)) if math.isfinite(bound) else 0
+
+
 @dataclass(frozen=True, slots=True)
 class AuditedLimit:
     """One limit: `predicted` and `maximum` are k·u in `unit`; `where_mm` is the worst place of a region limit.
 
-    `predicted` is infinite when the sites do not determine the direction at all.
+    `predicted` is infinite when the sites do not determine the direction at all. `floor`: what it would be with every
+    candidate measured, NaN when not computed; no plan beats it.
     """
 
     label: str
@@ -30,6 +36,7 @@ class AuditedLimit:
     unit: str
     where_mm: tuple[float, float] | None = None
     axis: str = ""
+    floor: float = math.nan
 
     @property
     def ratio(self) -> float:
@@ -38,12 +45,16 @@ class AuditedLimit:
 
 @dataclass(frozen=True, slots=True)
 class AuditedTerm:
-    """k·u of one term in its unit; `maximum` is NaN when no limit holds it."""
+    """k·u of one term in its unit; `maximum` is NaN when no limit holds it.
+
+    `bias`: one standard deviation of what potential terms, ignored by the fit, would put on it; 0 without any.
+    """
 
     name: str
     unit: str
     k_u: float
     maximum: float
+    bias: float = 0.0
 
 
 @dataclass(frozen=True, slots=True)
@@ -110,7 +121,7 @@ class Plan:
     @property
     def at_least(self) -> int:
         """The fewest sites that the bound leaves possible; 0 while nothing is known."""
-        return max(0, math.ceil(self.lower_bound - BOUND_TOLERANCE)) if math.isfinite(self.lower_bound) else 0
+        return whole_sites(self.lower_bound)
 
     @property
     def answer(self) -> str:

@@ -24,12 +24,31 @@ class TermLimit:
 class RegionLimit:
     """k·u of dx and of dy at most `position_um` everywhere in the region.
 
-    `region` is "panel", "cells:GRID", "marks" or "polygon" with `polygon_mm` (k, 2) in the centred panel frame.
+    `region` is "panel", "cells:GRID", "marks" or "polygon" with `polygon_mm` (k, 2) in the centred panel frame. `of`:
+    "correction", what the corrected terms say of the place, or "displacement", the whole predicted displacement there,
+    potential terms and local distortion included.
     """
 
     region: str
     position_um: float
     polygon_mm: NDArray[np.float64] | None = None
+    of: str = "correction"
+
+
+@dataclass(frozen=True, slots=True)
+class TermPrior:
+    """Prior standard deviation of each named corrected term, in the term's unit."""
+
+    terms: tuple[str, ...]
+    sd: float
+
+
+@dataclass(frozen=True, slots=True)
+class Potential:
+    """Terms that are not corrected but perhaps present, each with a standard deviation of `sd_um` (or its unit)."""
+
+    terms: Model
+    sd_um: float
 
 
 @dataclass(frozen=True, slots=True)
@@ -67,6 +86,8 @@ class Study:
     coverage_factor: float = 3.0
     rules: Rules = field(default_factory=Rules)
     search: SearchOptions = field(default_factory=SearchOptions)
+    priors: tuple[TermPrior, ...] = ()
+    potential: Potential | None = None
     source: Source = Source("", "")
     layout_source: Source = Source("", "")
     warnings: tuple[str, ...] = ()

@@ -76,16 +76,37 @@ class Assumed:
                       np.stack([nothing, basis * self.field.sigma_um[1]], axis=1)]
         return np.concatenate(parts, axis=2)
 
-    def correction(self, at: Places) -> Array:
-        """Directions of the corrections applied at points, (n, 2, size): the corrected terms alone."""
-        if self.size == self.corrected:
-            return design_blocks(self.model, at)
-        return np.concatenate([design_blocks(self.model, at),
-                               np.zeros((len(at), 2, self.size - self.corrected))], axis=2)
+    def position(self, at: Places, of: str) -> Array:
+        """Directions of a predicted position at points, (n, 2, size).
+
+        `of` "correction": what the corrected terms say; "displacement": all that is assumed, the field included.
+        """
+        if of == "displacement" or self.size == self.corrected:
+            return self.blocks(at)
+        nothing = np.zeros((len(at), 2, self.size - self.corrected))
+        return np.concatenate([design_blocks(self.model, at), nothing], axis=2)
+
+    def fixed_um(self, xy_mm: Array, of: str) -> Array:
+        """Standard uncertainty of a predicted position that no reading lowers, (n, 2): what the field's cut leaves out."""
+        if of != "displacement" or self.field is None:
+            return np.zeros((len(xy_mm), 2))
+        return np.sqrt(self.field.neglected(xy_mm))[:, None] * np.asarray(self.field.sigma_um)
+
+    def bias(self, whitened: Array) -> Array:
+        """What the potential terms would put on each corrected term if they were ignored in the fit, (p,): one sd.
+
+        The alias matrix (X₁ᵀX₁)⁻¹X₁ᵀX₂ of the chosen readings (Box & Draper 1959), summed in quadrature over the
+        independent potential terms. Zero without potential terms; priors of corrected terms take part in the fit.
+        """
+        if not len(self.potential):
+            return np.zeros(self.corrected)
+        assert self.potential_sd is not None
+        rows = whitened.reshape(-1, self.size)
+        fitted, ignored = rows[:, :self.corrected], rows[:, self.corrected:self.corrected + len(self.potential)]
+        normal = fitted.T @ fitted + np.diag(1.0 / self.sd**2)
+        alias = np.linalg.pinv(normal, hermitian=True) @ (fitted.T @ ignored)
+        return np.sqrt(((alias * self.potential_sd) ** 2).sum(axis=1))
 
     def sigma_um(self, noise: Noise, sites: Sites) -> Array:
         """Standard uncertainty of each reading, (n, 2): noise, and the share of the field that its directions leave out."""
-        sigma = noise.sigma_um(sites)
-        if self.field is None:
-            return sigma
-        return np.hypot(sigma, np.sqrt(self.field.neglected(sites.xy_mm))[:, None] * np.asarray(self.field.sigma_um))
+        return np.hypot(noise.sigma_um(sites), self.fixed_um(sites.xy_mm, "displacement"))

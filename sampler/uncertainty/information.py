@@ -61,8 +61,16 @@ class Knowledge:
         half = self.vectors / np.sqrt(self.values) / self.scale[:, None]
         return half @ half.T
 
-    def log_det(self) -> float:
-        """log det M; −inf when a direction is undetermined."""
-        if not self.determined:
+    def log_det(self, interest: NDArray[np.bool_] | None = None) -> float:
+        """log det of the information on the terms of interest (p,), all by default: −log det of their covariance.
+
+        −inf when one of them is undetermined.
+        """
+        if interest is None or interest.all():
+            if not self.determined:
+                return -np.inf
+            return float(np.log(self.values).sum() + 2 * np.log(self.scale).sum())
+        if np.isinf(self.variance(np.eye(len(self.scale))[interest])).any():
             return -np.inf
-        return float(np.log(self.values).sum() + 2 * np.log(self.scale).sum())
+        half = self.vectors[interest][:, self.known] / np.sqrt(self.values[self.known])
+        return float(2 * np.log(self.scale[interest]).sum() - np.linalg.slogdet(half @ half.T)[1])

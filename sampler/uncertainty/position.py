@@ -7,9 +7,10 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from sampler.model.basis import Model, design_blocks, places
+from sampler.model.basis import places
 from sampler.panel.layout import Layout
 from sampler.panel.region import RegionPoints, inside_region, region_points
+from sampler.uncertainty.assumed import Assumed
 from sampler.uncertainty.information import Knowledge
 
 Array = NDArray[np.float64]
@@ -33,15 +34,19 @@ class WorstPlace:
     cell: dict[str, int]
 
 
-def position_u(model: Model, layout: Layout, knowledge: Knowledge, xy_mm: Array,
-               cell: dict[str, NDArray[np.int64]] | None = None) -> Array:
-    """Standard uncertainty of the predicted dx and dy at points (n, 2), in µm, (n, 2); infinite where undetermined."""
+def position_u(assumed: Assumed, layout: Layout, knowledge: Knowledge, xy_mm: Array,
+               cell: dict[str, NDArray[np.int64]] | None = None, of: str = "correction") -> Array:
+    """Standard uncertainty of the predicted dx and dy at points (n, 2), in µm, (n, 2); infinite where undetermined.
+
+    `of`: "correction" or "displacement", as in the study's region limits.
+    """
     parts = []
     for start in range(0, len(xy_mm), CHUNK_POINTS):
         part = slice(start, start + CHUNK_POINTS)
         here = None if cell is None else {name: index[part] for name, index in cell.items()}
-        blocks = design_blocks(model, places(layout, xy_mm[part], here))
-        parts.append(np.sqrt(knowledge.variance(blocks.reshape(-1, len(model)))).reshape(-1, 2))
+        rows = assumed.position(places(layout, xy_mm[part], here), of).reshape(-1, assumed.size)
+        variance = knowledge.variance(rows).reshape(-1, 2) + assumed.fixed_um(xy_mm[part], of) ** 2
+        parts.append(np.sqrt(variance))
     return np.concatenate(parts) if parts else np.zeros((0, 2))
 
 
@@ -56,11 +61,11 @@ def raster(layout: Layout, region: str, polygon_mm: Array | None = None, steps: 
     return region_points(layout, region, polygon_mm, extent / steps)
 
 
-def worst_place(model: Model, layout: Layout, knowledge: Knowledge, region: str,
-                polygon_mm: Array | None = None, points: RegionPoints | None = None) -> WorstPlace:
+def worst_place(assumed: Assumed, layout: Layout, knowledge: Knowledge, region: str, polygon_mm: Array | None = None,
+                points: RegionPoints | None = None, of: str = "correction") -> WorstPlace:
     """The largest standard uncertainty of dx or dy in a region: raster, then refined around its worst places."""
     points = raster(layout, region, polygon_mm) if points is None else points
-    u = position_u(model, layout, knowledge, points.xy_mm, points.cell)
+    u = position_u(assumed, layout, knowledge, points.xy_mm, points.cell, of)
     at, axis = np.unravel_index(np.argmax(u), u.shape)
     best = WorstPlace(float(u[at, axis]), (float(points.xy_mm[at, 0]), float(points.xy_mm[at, 1])), int(axis),
                       {name: int(index[at]) for name, index in points.cell.items()})
@@ -84,8 +89,8 @@ def worst_place(model: Model, layout: Layout, knowledge: Knowledge, region: str,
                 inside &= _in_cell(layout, name, index, flat)
             tried = np.full(len(flat), -1.0)
             if inside.any():
-                tried[inside] = position_u(model, layout, knowledge, flat[inside],
-                                           {name: index[inside] for name, index in same.items()})[:, axis]
+                tried[inside] = position_u(assumed, layout, knowledge, flat[inside],
+                                           {name: index[inside] for name, index in same.items()}, of)[:, axis]
             tried = tried.reshape(len(centre), -1)
             pick = tried.argmax(axis=1)
             better = tried[np.arange(len(centre)), pick] > value
