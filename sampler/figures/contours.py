@@ -122,7 +122,8 @@ def draw_contours(axes: Axes, raster: Raster, limits: tuple[float, ...], clip: P
         place = _label_place(np.concatenate([path.vertices for path in line.get_paths()]), clip.get_xy(), taken)
         axes.text(place[0], place[1], f"limit {limit:.6g} µm", fontsize=style.SMALL_PT + 0.5, fontweight="bold",
                   ha="center", va="center", zorder=6.4,
-                  bbox={"boxstyle": "round,pad=0.25", "facecolor": style.PAPER, "edgecolor": style.INK, "linewidth": 0.7})
+                  bbox={"boxstyle": "round,pad=0.25", "facecolor": style.PAPER, "edgecolor": style.INK,
+                        "linewidth": 0.7})
 
 
 def _label_place(line: Array, outline: Array, taken: Array) -> Array:

@@ -217,8 +217,9 @@ def _draw_marks(axes: Axes, scene: _Scene, origin: Array) -> list[Artist]:
     crosses: dict[str, Any] = {"marker": "x", "markersize": 2.6, "color": style.FAINT, "markeredgewidth": 0.5}
     dots: dict[str, Any] = {"marker": "o", "markersize": 2.0 if len(free) < MANY_DOTS else 1.3, "color": style.SOFT,
                             "markeredgewidth": 0.0}
-    for xy, most, one, many, look in ((others, MOST_OTHER_DOTS, "mark that is no candidate", "marks that are no candidates",
-                                       crosses), (free, MOST_DOTS, "candidate", "candidates", dots)):
+    for xy, most, one, many, look in (
+            (others, MOST_OTHER_DOTS, "mark that is no candidate", "marks that are no candidates", crosses),
+            (free, MOST_DOTS, "candidate", "candidates", dots)):
         if len(xy) == 0:
             continue
         drawn = style.thinned(xy, most)

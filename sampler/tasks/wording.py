@@ -21,18 +21,18 @@ def significant(value: float, digits: int = 3) -> str:
     return f"{value:.{digits - 1}e}" if not -4 <= decimals <= digits + 4 else f"{rounded:.{max(0, decimals)}f}"
 
 
-def against(predicted: float, maximum: float) -> tuple[str, str]:
-    """A prediction and its limit, with as many digits as it takes to show on which side of the limit it is.
+def against(predicted: float, maximum: float, digits: int = 3) -> tuple[str, str]:
+    """A prediction and its limit as texts, with as many digits as it takes to show on which side of the limit it is.
 
     >>> against(0.93123, 1.0), against(1.0004, 1.0)
     (('0.931', '1'), ('1.0004', '1'))
     """
-    text = significant(predicted)
-    for digits in range(4, 8):
+    text = significant(predicted, digits)
+    for more in range(digits + 1, 8):
         if not math.isfinite(predicted) or predicted == maximum or (
                 float(text) != maximum and (float(text) > maximum) == (predicted > maximum)):
             break
-        text = significant(predicted, digits)
+        text = significant(predicted, more)
     return text, f"{maximum:.6g}"
 
 
@@ -40,10 +40,10 @@ def share(ratio: float) -> str:
     """A ratio to a limit in whole per cent, never rounded across the limit.
 
     >>> share(0.931), share(0.9999), share(1.0), share(1.0001), share(math.inf)
-    ('93 %', '99 %', '100 %', '101 %', 'over')
+    ('93 %', '99 %', '100 %', '101 %', '-')
     """
     if not math.isfinite(ratio):
-        return "over"
+        return "-"
     if ratio > 10:
         return f"{significant(ratio)}x"
     per_cent = 100 * ratio
