@@ -119,7 +119,12 @@ def draw_contours(axes: Axes, raster: Raster, limits: tuple[float, ...], clip: P
             line = axes.contour(raster.x_mm, raster.y_mm, raster.values, levels=[limit], colors=colour,
                                 linewidths=width, zorder=order)
             line.set_clip_path(clip)
-        place = _label_place(np.concatenate([path.vertices for path in line.get_paths()]), clip.get_xy(), taken)
+        vertices = np.concatenate([np.zeros((0, 2)), *(path.vertices for path in line.get_paths())])
+        outline = clip.get_xy()
+        vertices = vertices[((vertices >= outline.min(axis=0)) & (vertices <= outline.max(axis=0))).all(axis=1)]
+        if len(vertices) == 0:  # the limit lies in a gap between determined parts of the map
+            continue
+        place = _label_place(vertices, outline, taken)
         axes.text(place[0], place[1], f"limit {limit:.6g} µm", fontsize=style.SMALL_PT + 0.5, fontweight="bold",
                   ha="center", va="center", zorder=6.4,
                   bbox={"boxstyle": "round,pad=0.25", "facecolor": style.PAPER, "edgecolor": style.INK,
@@ -128,13 +133,12 @@ def draw_contours(axes: Axes, raster: Raster, limits: tuple[float, ...], clip: P
 
 def _label_place(line: Array, outline: Array, taken: Array) -> Array:
     """The vertex of a limit line that is farthest from the panel's edge and from the places already `taken` (k, 2)."""
-    inside = line[((line > outline.min(axis=0)) & (line < outline.max(axis=0))).all(axis=1)]
     # The text is wide: a place to its side is in the way sooner than one above it.
     squeeze = np.array([0.4, 1.0])
-    room = 0.7 * _to_edge(inside * squeeze, outline * squeeze)
+    room = 0.7 * _to_edge(line * squeeze, outline * squeeze)
     if len(taken):
-        room = np.minimum(room, np.linalg.norm((inside[:, None] - taken[None]) * squeeze, axis=2).min(axis=1))
-    return inside[np.argmax(room)]
+        room = np.minimum(room, np.linalg.norm((line[:, None] - taken[None]) * squeeze, axis=2).min(axis=1))
+    return line[np.argmax(room)]
 
 
 def draw_colour_bar(figure: Figure, box: tuple[float, float, float, float], raster: Raster, limits: tuple[float, ...],

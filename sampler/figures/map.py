@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from itertools import cycle
 from typing import Any
 
 import numpy as np
@@ -182,7 +183,7 @@ def _draw_panel(axes: Axes, layout: Layout, outline: Array, raster: Raster, scen
             band.set_clip_path(clip)
         legend.append(Patch(facecolor=style.TROUGH, edgecolor=style.SOFT, linewidth=0.6,
                             label=f"edge exclusion {layout.edge_exclusion_mm:g} mm"))
-    for grid, dashes in zip(layout.grids, ("-", (0, (4, 2)), (0, (1, 1.5)), "-."), strict=False):
+    for grid, dashes in zip(layout.grids, cycle(("-", (0, (4, 2)), (0, (1, 1.5)), "-.")), strict=False):
         name = f"cells of grid {plain(grid.name, 24)}"
         if grid.cells > MOST_CELLS:
             legend.append(Line2D([], [], linestyle="none", label=f"{name}: {grid.cells:,}, not drawn"))

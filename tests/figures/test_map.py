@@ -152,6 +152,25 @@ def test_partly_undetermined_position(plan):
     assert plan_map(replace(plan, audit=replace(plan.audit, position=position)))["map.png"]
 
 
+def test_limit_in_a_gap_of_the_map_draws_no_line():
+    """Two determined parts, below and above the limit, with nothing between them."""
+    plan = invented.region_plan(2.0)
+    values = np.where(np.arange(60) < 25, 1.0, 3.0)[None, :, None] * np.ones((60, 1, 2))
+    values[:, 20:30] = np.inf
+    audit = replace(plan.audit, position=replace(plan.audit.position, k_u_um=values))
+    assert texts(plan_map(replace(plan, audit=audit))).count("limit 2 µm") == 1  # in the legend alone
+
+
+def test_limit_reached_only_in_a_corner_without_edge_exclusion():
+    plan = invented.region_plan(1.0, status="interval")
+    values = np.full((60, 60, 2), 0.5)
+    values[0, 0] = 1.2
+    audit = replace(plan.audit, position=replace(plan.audit.position, k_u_um=values))
+    layout = replace(plan.study.layout, edge_exclusion_mm=0.0)
+    words = texts(plan_map(replace(plan, audit=audit, study=replace(plan.study, layout=layout))))
+    assert words.count("limit 1 µm") == 2
+
+
 def test_raster_is_carried_straight_beyond_the_panel():
     """A plane stays a plane beyond the rim and across the notch's empty cells next to known ones."""
     layout = invented.core_layout()
@@ -226,6 +245,13 @@ def test_a_grid_of_too_many_cells_is_only_named(plan):
     layout = replace(plan.study.layout, grids=(Grid("fine", 60, 60, (8.0, 8.0), (8.5, 8.5)),))
     words = texts(plan_map(replace(plan, study=replace(plan.study, layout=layout))))
     assert "cells of grid fine: 3,600, not drawn" in words
+
+
+def test_every_grid_is_drawn_however_many(plan):
+    grids = tuple(Grid(f"g{i}", 2, 2, (50.0, 50.0), (60.0, 60.0)) for i in range(6))
+    layout = replace(plan.study.layout, grids=grids)
+    words = texts(plan_map(replace(plan, study=replace(plan.study, layout=layout))))
+    assert {f"cells of grid g{i}" for i in range(6)} <= set(words)
 
 
 def test_no_edge_exclusion(plan):

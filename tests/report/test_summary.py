@@ -169,6 +169,7 @@ def test_wide_letters_and_escapes_are_tamed(plan):
     title = "パネル計測計画" * 10 + "\x1b[2J\nsecond line"
     text = plan_summary(replace(plan, study=replace(plan.study, title=title), warnings=("警告の内容" * 40,)))
     assert "\x1b" not in text
+    assert columns("パネルa") == 7
     assert any(line.startswith("Study: パネル") and line.endswith("...") for line in screen(text))
 
 
