@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -13,6 +14,7 @@ from sampler.optimise.problem import SiteProblem
 Array = NDArray[np.float64]
 Indices = NDArray[np.int64]
 
+SQUARE, NAMED = -1, -2
 TRIALS = 10
 """How many splits are tried with a linear program each before one is taken."""
 
@@ -21,8 +23,8 @@ TRIALS = 10
 class HalfSpace:
     """The sites with feature ≤ `threshold`; a set has at most `at_most` of them, or more.
 
-    The feature of site i is B_i[axis]·vector, or with `axis` −1 ‖B_i·vector‖², in the problem's own terms.
-    `mask` (n,) in the tree's order of the sites.
+    The feature of site i is B_i[axis]·vector, or with `axis` SQUARE ‖B_i·vector‖², in the problem's own terms; `axis`
+    NAMED means the sites named by `keys`. `mask` (n,) in the tree's order of the sites.
     """
 
     axis: int
@@ -30,6 +32,7 @@ class HalfSpace:
     threshold: float
     at_most: int
     mask: NDArray[np.bool_]
+    keys: tuple[Any, ...] = ()
 
 
 class Splits:
@@ -70,7 +73,7 @@ class Splits:
         features = list(self.fixed)
         for block, z in worst:
             lifted = self.split.blocks[block].lifts[0] @ z
-            features += [(axis, lifted) for axis in range(self.problem.blocks.shape[1])] + [(-1, lifted)]
+            features += [(axis, lifted) for axis in range(self.problem.blocks.shape[1])] + [(SQUARE, lifted)]
         found: list[tuple[float, int, float, float, int, tuple[int, ...]]] = []
         for index, (axis, vector) in enumerate(features):
             values = self.values(axis, vector, sites)
@@ -110,3 +113,13 @@ class Splits:
         at = int(np.argmax(np.diff(edges)))
         threshold = (edges[at] + edges[at + 1]) / 2
         return HalfSpace(axis, vector, float(threshold), at_most, values <= threshold)
+
+    def single(self, sites: Indices, w: Array) -> HalfSpace | None:
+        """The most fractional site by itself: for sites that no feature tells apart."""
+        part = np.minimum(w, 1 - w)
+        if part.max(initial=0.0) <= 1e-6:
+            return None
+        site = sites[int(np.argmax(part))]
+        mask = np.zeros(len(self.order), bool)
+        mask[site] = True
+        return HalfSpace(NAMED, np.zeros(self.problem.p), 0.0, 0, mask, (self.problem.key[self.order[site]].item(),))

@@ -25,7 +25,8 @@ def pack(matrix: Array) -> Array:
 
 @dataclass(frozen=True, slots=True)
 class Row:
-    """A covering row: limit l at a point. `z[b]` (q_b, k) for the limit's columns `columns[b]` in block b.
+    """A covering row: limit l at a point. `z[b]` (q_b, k), one for each of the limit's columns in block b, turned back into
+    the problem's own terms by the block's lifts `lift[b]` (k,).
 
     `packed`: the sums Σ_k z_kz_kᵀ of all blocks, packed, so that site i's coefficient is its packed BᵢᵀBᵢ times it.
     `prior` = Σ zᵀP₀z. For every w that meets the limit: Σ wᵢaᵢ + prior ≥ 1.
@@ -33,9 +34,16 @@ class Row:
 
     limit: int
     z: tuple[Array, ...]
-    columns: tuple[Indices, ...]
+    lift: tuple[Indices, ...]
     packed: Array
     prior: float
+
+
+def cover(split: Split, limit: int, z: list[Array], lift: list[Indices]) -> Row:
+    """The covering row of a limit from its parts in each block."""
+    squares = [part @ part.T for part in z]
+    prior = sum(float((square * block.prior).sum()) for square, block in zip(squares, split.blocks, strict=True))
+    return Row(limit, tuple(z), tuple(lift), np.concatenate([pack(square) for square in squares]), prior)
 
 
 class Gram:

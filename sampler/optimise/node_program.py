@@ -43,6 +43,7 @@ class NodeProgram:
     def __init__(self, budget: float) -> None:
         self.solver = quiet_highs()
         self.solver.setOptionValue("presolve", "off")
+        self.solver.setOptionValue("simplex_scale_strategy", 0)  # coefficients are of order one already
         nothing, none = np.zeros(0, np.int32), np.zeros(0)
         self.solver.addCol(-1.0, 0.0, LARGEST_T, 0, nothing, none)
         self.solver.addCol(ELASTIC_PRICE, 0.0, np.inf, 0, nothing, none)
@@ -78,19 +79,19 @@ class NodeProgram:
         self.cover_row.append(self.rows)
         self.rows += 1
 
-    def add_count(self, member: Array) -> None:
+    def add_count(self, member: NDArray[np.bool_]) -> None:
         """A count row over the program's sites, (sites,) 0 or 1; without bounds until `set_counts`."""
         nothing, none = np.zeros(0, np.int32), np.zeros(0)
         for _ in range(2):
             self.solver.addCol(ELASTIC_PRICE, 0.0, np.inf, 0, nothing, none)
-        held = np.array(self.site_column, np.int32)[member > 0]
+        held = np.array(self.site_column, np.int32)[member]
         at = np.concatenate([np.array([self.columns, self.columns + 1], np.int32), held])
         self.solver.addRow(-np.inf, np.inf, len(at), at, np.concatenate([[1.0, -1.0], np.ones(len(held))]))
         self.columns += 2
         self.count_row.append(self.rows)
         self.rows += 1
 
-    def set_bounds(self, lower: Array, upper: Array) -> None:
+    def set_bounds(self, lower: NDArray, upper: NDArray) -> None:
         """Bounds of the program's sites, (sites,)."""
         at = np.array(self.site_column, np.int32)
         self.solver.changeColsBounds(len(at), at, lower.astype(float), upper.astype(float))
@@ -114,10 +115,10 @@ class NodeProgram:
         return Solution(t, value[self.site_column], np.maximum(dual[self.cover_row], 0.0), max(-dual[0], 0.0),
                         -dual[self.count_row])
 
-    def trial(self, member: Array, at_most: int) -> tuple[float, float]:
+    def trial(self, member: NDArray[np.bool_], at_most: int) -> tuple[float, float]:
         """t with at most, and with more than, `at_most` of the member sites; the program is put back as it was."""
         basis = self.solver.getBasis()
-        held = np.array(self.site_column, np.int32)[member > 0]
+        held = np.array(self.site_column, np.int32)[member]
         self.solver.addRow(-np.inf, at_most, len(held), held, np.ones(len(held)))
         values = []
         for low, high in ((-np.inf, at_most), (at_most + 1.0, np.inf)):

@@ -22,9 +22,12 @@ from numpy.typing import NDArray
 
 from sampler.optimise.blocks import Split
 from sampler.optimise.branching import HalfSpace, Splits
-from sampler.optimise.gram import Gram, Row, pack
+from sampler.optimise.certificate import counting_certificate, tree_certificate
+from sampler.optimise.gram import Gram, Row, cover
 from sampler.optimise.node_program import NodeProgram, Solution
 from sampler.optimise.problem import SiteProblem
+from sampler.optimise.rows import RowPool
+from sampler.optimise.steps import Multipliers, Step
 
 Array = NDArray[np.float64]
 Indices = NDArray[np.int64]
@@ -32,37 +35,16 @@ Indices = NDArray[np.int64]
 MARGIN = 1e-7
 """A node is closed or a site fixed only with this much to spare, relative to the terms summed: rounding is far smaller."""
 INTEGRAL = 1e-7
-FEASIBLE = 1.0 - 1e-12
+FEASIBLE = 1.0 + 1e-9
 """A set counts as found when every variance ratio is at most this."""
 RIDGE = 1e-9
 """Share of the mean diagonal added to M in the separation step only: any z gives a valid row."""
 FIRST_COLUMNS = 100
 MOST_ROUNDS = 200
 """Rows or columns are added at most so often in one node before it is branched on as it stands."""
-PROGRAM_ROWS = 160
-PROGRAM_COLUMNS = 400
+PROGRAM_ROWS = 100
+PROGRAM_COLUMNS = 250
 """The program is rebuilt with what was used lately when it holds more than this."""
-
-
-@dataclass(frozen=True, slots=True)
-class Multipliers:
-    """One weak-duality certificate: `y` of pool rows `rows`, `budget` μ₀, `rules` (rule, μ) and `counts` (split, μ)."""
-
-    rows: Indices
-    y: Array
-    budget: float
-    rules: tuple[tuple[int, float], ...]
-    counts: tuple[tuple[int, float], ...]
-
-
-@dataclass(frozen=True, slots=True)
-class Step:
-    """One line of the proof, in preorder: "split" (on `split`, at most `at_most` first), "fix" or "leaf"."""
-
-    kind: str
-    multipliers: Multipliers | None = None
-    split: int = -1
-    at_most: int = 0
 
 
 @dataclass(frozen=True, slots=True)
@@ -92,7 +74,8 @@ class Tree:
     """The search for one count. Sites are in the order of their keys; `order` maps back."""
 
     def __init__(self, split: Split, problem: SiteProblem, count: float, weights: Array | None = None,
-                 first_columns: int = FIRST_COLUMNS) -> None:
+                 first_columns: int = FIRST_COLUMNS,
+                 rows: RowPool | None = None) -> None:
         self.split, self.problem, self.count = split, problem, float(count)
         self.order = np.argsort(problem.key, kind="stable")
         inverse = np.empty_like(self.order)
@@ -127,7 +110,9 @@ class Tree:
         self.held: list[int] = []          # pool rows in the program
         self.counted: list[int] = []       # splits in the program
         self.program = NodeProgram(self.count)
-        self._build(first, [], [])
+        if rows is not None:
+            self.pool = [_pool_row(split, rows, index) for index in range(len(rows))]
+        self._build(first, list(range(len(self.pool)))[:PROGRAM_ROWS], [])
         w = np.full(len(free), min(1.0, self.count / max(len(free), 1)))
         self.stack = [_Node(lower, upper, (), free, w)]
 
@@ -218,27 +203,22 @@ class Tree:
     def _new_rows(self, ratios: Array, solved: list[Array], most: int = 3, least_ratio: float = 1.0) -> list[Row]:
         """Rows of the worst limits, none nearly parallel to a worse one (correlation of the two estimates > 0.9)."""
         rows: list[Row] = []
-        leads: list[tuple[int, Array]] = []
+        leads: list[tuple[int, Array, float]] = []  # block, M⁻¹c of the limit's first column there, its variance
         worst = np.argsort(-ratios, kind="stable")[:200]
         for limit in worst:
             if rows and (len(rows) == most or ratios[limit] < max(least_ratio, 0.5 * ratios[worst[0]])):
                 break
-            z, columns = [], []
-            for block, part in zip(self.blocks, solved, strict=True):
-                mine = np.flatnonzero(block.owner == limit)
-                columns.append(mine)
-                z.append(part[:, mine] / ratios[limit])
-            sizes = [np.einsum("qk,qk->", block.columns[:, mine], part)
-                     for block, mine, part in zip(self.blocks, columns, z, strict=True)]
-            lead = int(np.argmax(sizes))
-            column = self.blocks[lead].columns[:, columns[lead][0]]
-            if any(home == lead and (column @ other) ** 2 > 0.81 * (column @ z[lead][:, 0]) * size
-                   for home, other, size in leads):  # type: ignore[misc]
+            columns = [np.flatnonzero(block.owner == limit) for block in self.blocks]
+            lead = max(range(len(columns)), key=lambda b: len(columns[b]))
+            direction = self.blocks[lead].columns[:, columns[lead][0]]
+            estimate = solved[lead][:, columns[lead][0]]
+            variance = float(direction @ estimate)
+            if any(block == lead and (direction @ other) ** 2 > 0.81 * variance * size for block, other, size in leads):
                 continue
-            leads.append((lead, z[lead][:, 0], float(column @ z[lead][:, 0])))  # type: ignore[arg-type]
-            squares = [part @ part.T for part in z]
-            rows.append(Row(int(limit), tuple(z), tuple(columns), np.concatenate([pack(q) for q in squares]),
-                            float(sum((q * block.prior).sum() for q, block in zip(squares, self.blocks, strict=True)))))
+            leads.append((lead, estimate, variance))
+            rows.append(cover(self.split, int(limit), [part[:, mine] / ratios[limit] for part, mine in
+                                                       zip(solved, columns, strict=True)],
+                              [block.lift[mine] for block, mine in zip(self.blocks, columns, strict=True)]))
         return rows
 
     # -- the bound ---------------------------------------------------------------------------------------------------
@@ -329,6 +309,8 @@ class Tree:
                 return found
             if worst <= 1.0:
                 return sites, w
+            if worst * solution.t <= 1.0 + 1e-9:  # the program is solved, and only the margin keeps the node open
+                break
             rows = self._new_rows(ratios, solved)
             if centre is not None:
                 middle = np.union1d(sites, centre[0])
@@ -376,8 +358,12 @@ class Tree:
             return None
         return chosen if self.split.ratios(chosen).max(initial=0.0) <= FEASIBLE else None
 
-    def run(self, stop: Callable[[], bool]) -> tuple[str, Indices | None]:
+    def run(self, stop: Callable[[], bool], progress: Callable[[float, float], None] | None = None
+            ) -> tuple[str, Indices | None]:
+        """The whole search: status and the chosen set."""
         while self.stack:
+            if progress is not None and self.nodes % 16 == 0:
+                progress(self.count, np.inf)
             if stop():
                 return "open", None
             node = self.stack.pop()
@@ -397,7 +383,7 @@ class Tree:
         if solution is not None:
             slack, price, margin, multipliers = self._price(node, solution)
             self._fix(node, slack, price, margin, multipliers)
-        half = self._best_split(node, sites, w)
+        half = self._best_split(node, sites, w) or self.splits.single(sites, w)
         if half is None:
             self.undecided = True
             return
@@ -433,15 +419,29 @@ class Tree:
         return worst
 
 
-def decide(split: Split, problem: SiteProblem, count: float, *, rows: Any = None, weights: Array | None = None,
+def _pool_row(split: Split, rows: RowPool, index: int) -> Row:
+    mine = [np.flatnonzero(row == index) for row in rows.row]
+    return cover(split, int(rows.limit[index]), [z[:, k] for z, k in zip(rows.pieces, mine, strict=True)],
+                 [lift[k] for lift, k in zip(rows.lift, mine, strict=True)])
+
+
+def decide(split: Split, problem: SiteProblem, count: float, *, rows: RowPool | None = None, weights: Array | None = None,
            seconds: float = np.inf, stop: Callable[[], bool] | None = None,
            progress: Callable[[float, float], None] | None = None, processes: int = 1) -> Decision:
-    """Whether sites of total cost ≤ count meet every limit and rule: found, proven impossible, or open when time ends."""
+    """Whether sites of total cost ≤ count meet every limit and rule: found, proven impossible, or open when time ends.
+
+    `rows` and `weights` (n,) of a relaxation start the tree warm. `progress(count, inf)` is a sign of life.
+    """
     started = time.monotonic()
 
     def ended() -> bool:
         return time.monotonic() - started > seconds or (stop is not None and stop())
 
-    tree = Tree(split, problem, count, weights)
-    status, chosen = tree.run(ended)
-    return Decision(status, chosen, None, tree.nodes, time.monotonic() - started)
+    certificate = counting_certificate(split, problem, count)
+    if certificate is not None:
+        return Decision("impossible", None, certificate, 0, time.monotonic() - started)
+    tree = Tree(split, problem, count, weights, rows=rows)
+    status, chosen = tree.run(ended, progress)
+    if status == "impossible":
+        certificate = tree_certificate(split, problem, count, tree.pool, tree.halves, tree.proof)
+    return Decision(status, chosen, certificate, tree.nodes, time.monotonic() - started)
