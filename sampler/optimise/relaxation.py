@@ -54,8 +54,9 @@ class Relaxation:
     """What the relaxation proved.
 
     `bound`: on the cost of any set that meets limits and rules (infinite: none does). `weights` (n,): near the optimum, and
-    meeting the limits. `value` = cost @ weights; `gap` = value − bound. `rows`, `duals` (R,), `rule_duals` (rules, 2) for
-    lower and upper (the last rule is max_sites when the problem has it), `reduced_costs` (n,) = cost − price: the proof.
+    meeting the limits. `value` = cost @ weights; `gap` = value − bound. `rows`, `duals` (R,), `rule_duals` (rules,),
+    positive for the lower count and negative for the upper (the last rule is max_sites when the problem has it), and
+    `reduced_costs` (n,) = cost − price are the proof.
     `worst_ratio`: u/τ of the worst limit with every site that is allowed; infinite when undetermined.
     """
 
@@ -137,12 +138,11 @@ class _Bounder:
         income = float(y @ rows.right_hand_side + point.rule_duals @ self.sides.level - price[required].sum())
         scale, bound = best_scale(income, problem.cost[self.free], price[self.free])
         bound += float(problem.cost[required].sum())
-        reduced = problem.cost - scale * price
         if bound > self.best.bound:
-            both = np.zeros(self.best.rule_duals.shape)
-            both[self.sides.rule, np.where(self.sides.sign > 0, 0, 1)] = scale * point.rule_duals
-            self.best = replace(self.best, bound=bound, rows=rows, duals=scale * y, rule_duals=both,
-                                reduced_costs=reduced)
+            rules = np.bincount(self.sides.rule, weights=scale * self.sides.sign * point.rule_duals,
+                                minlength=len(self.best.rule_duals))
+            self.best = replace(self.best, bound=bound, rows=rows, duals=scale * y, rule_duals=rules,
+                                reduced_costs=problem.cost - scale * price)
         return problem.cost - price
 
 
@@ -164,7 +164,7 @@ def relax(split: Split, problem: SiteProblem, *, seconds: float, progress: Calla
     worst = np.inf if len(split.impossible) else float(np.sqrt(_ratios(split, allowed).max(initial=0.0)))
     best = Relaxation(float(problem.cost[required].sum()), (~problem.forbidden).astype(float),
                       float(problem.cost[~problem.forbidden].sum()), nothing, np.zeros(0),
-                      np.zeros((len(problem.rules.lower) + (problem.max_sites is not None), 2)),
+                      np.zeros(len(problem.rules.lower) + (problem.max_sites is not None)),
                       problem.cost.copy(), worst, False)
     if worst**2 > FEASIBLE:
         return replace(best, bound=np.inf)
