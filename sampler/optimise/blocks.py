@@ -114,8 +114,9 @@ def _gram(blocks: Array, row_weight: Array | None = None) -> Array:
     return total
 
 
-def _parts(blocks: Array, prior: Array, basis: Array) -> tuple[Array, NDArray[np.int64]]:
-    """A basis adapted to the independent parts, (p, r), and the part of each of its directions, (r,).
+def _parts(blocks: Array, prior: Array, basis: Array) -> tuple[Array, NDArray[np.int64], Array]:
+    """A basis adapted to the independent parts, (p, r), the part of each of its directions, (r,), and the largest response
+    of each kind of reading to each direction, (m, r).
 
     Readings of different parts are orthogonal in the orthonormal metric, so the eigenvectors of a generic weighted sum
     of bbᵀ lie in single parts; directions are of one part when some reading, or the prior, sees both.
@@ -126,13 +127,15 @@ def _parts(blocks: Array, prior: Array, basis: Array) -> tuple[Array, NDArray[np
     _, turn = np.linalg.eigh(generic)
     basis = basis @ turn
     seen = np.abs(basis.T @ prior @ basis) > ZERO_TOLERANCE
+    peak = np.zeros((m, basis.shape[1]))
     for axis in range(m):
         for start in range(0, n, CHUNK_ROWS):
             response = np.abs(blocks[start:start + CHUNK_ROWS, axis] @ basis)
+            peak[axis] = np.maximum(peak[axis], response.max(axis=0, initial=0.0))
             # Relative to the reading itself, so that a noisy mark's couplings count like any other's.
             sees = (response > ZERO_TOLERANCE * response.max(axis=1, keepdims=True, initial=0.0)).astype(np.float32)
             seen |= (sees.T @ sees) > 0
-    return basis, connected_components(seen, directed=False)[1].astype(np.int64)
+    return basis, connected_components(seen, directed=False)[1].astype(np.int64), peak
 
 
 def _as_equal(first: Block, rows: Array, prior: Array) -> Array | None:
@@ -163,7 +166,7 @@ def split(problem: SiteProblem) -> Split:
     scale = np.sqrt(np.maximum(np.diag(information), np.finfo(float).tiny))
     values, vectors = np.linalg.eigh(information / np.outer(scale, scale))
     known = values > RANK_TOLERANCE * max(values[-1], 0.0)
-    basis, part = _parts(blocks, prior, vectors[:, known] / np.sqrt(values[known]) / scale[:, None])
+    basis, part, peak = _parts(blocks, prior, vectors[:, known] / np.sqrt(values[known]) / scale[:, None])
 
     unknown = vectors[:, ~known].T @ (problem.directions / scale).T
     length = np.linalg.norm(problem.directions / scale, axis=1)
@@ -174,10 +177,9 @@ def split(problem: SiteProblem) -> Split:
     pieces: list[list[tuple[Array, NDArray[np.int64], int]]] = []  # per block: columns, limits, lift
     for label in range(part.max(initial=-1) + 1):
         lift = basis[:, part == label]
-        axes = [a for a in range(blocks.shape[1])
-                if np.abs(blocks[:, a] @ lift).max(initial=0.0) > 0
-                and _touches(blocks, a, lift, basis)]
-        rows = np.ascontiguousarray(np.stack([blocks[:, a] @ lift for a in axes], axis=1)) if axes else \
+        felt = peak[:, part == label].max(axis=1, initial=0.0)
+        axes = np.flatnonzero(felt > ZERO_TOLERANCE * peak.max(axis=1, initial=0.0))  # beyond rounding
+        rows = np.ascontiguousarray(np.stack([blocks[:, a] @ lift for a in axes], axis=1)) if len(axes) else \
             np.zeros((problem.n, 0, lift.shape[1]))
         block_prior = lift.T @ prior @ lift
         home = len(found)
@@ -212,12 +214,6 @@ def split(problem: SiteProblem) -> Split:
     offset = -2.0 * np.linalg.slogdet(np.concatenate([lift for block in done for lift in block.lifts], axis=1))[1] \
         if known.all() else np.nan
     return Split(tuple(done), len(keep), keep, np.flatnonzero(impossible), float(offset))
-
-
-def _touches(blocks: Array, axis: int, lift: Array, basis: Array) -> bool:
-    """Whether readings of this axis say anything about this part, beyond rounding."""
-    part = np.abs(blocks[:, axis] @ lift).max(initial=0.0)
-    return bool(part > ZERO_TOLERANCE * np.abs(blocks[:, axis] @ basis).max(initial=0.0))
 
 
 def _needed(pieces: list[list[tuple[Array, NDArray[np.int64], int]]], limits: int,
