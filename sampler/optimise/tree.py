@@ -378,6 +378,10 @@ class Tree:
             self._branch(node, *outcome)
         return ("open" if self.undecided else "impossible"), None
 
+    def certificate(self) -> dict[str, Any]:
+        """The proof that was written down, once `run` says "impossible"."""
+        return tree_certificate(self.split, self.problem, self.count, self.pool, self.halves, self.proof)
+
     def _branch(self, node: _Node, sites: Indices, w: Array) -> None:
         solution = self.program.solve()
         if solution is not None:
@@ -443,5 +447,5 @@ def decide(split: Split, problem: SiteProblem, count: float, *, rows: RowPool | 
     tree = Tree(split, problem, count, weights, rows=rows)
     status, chosen = tree.run(ended, progress)
     if status == "impossible":
-        certificate = tree_certificate(split, problem, count, tree.pool, tree.halves, tree.proof)
+        certificate = tree.certificate()
     return Decision(status, chosen, certificate, tree.nodes, time.monotonic() - started)
