@@ -16,7 +16,7 @@ M depends on w through D = Σ_b q_b(q_b+1)/2 numbers, so the Hessian is diagonal
 from __future__ import annotations
 
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
@@ -30,11 +30,13 @@ TO_BOUNDARY = 0.99
 """Share of the way to the nearest bound that a step goes."""
 CENTRING = 0.3
 """Largest share of the present complementarity that a step aims at."""
+MOST_OWED = 3.0
+"""When the residuals are worth more than this many times the complementarity, the latter waits for them."""
 FLOOR = 1e-13
 """Weights, slacks and multipliers stay above this, so that ratios of them stay finite."""
 MOST_STEPS = 80
-MOST_IDLE = 4
-"""Steps without a better bound after which rounding is all that is left."""
+MOST_IDLE = 10
+"""Steps without a better bound or a smaller complementarity after which rounding is all that is left."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -180,18 +182,21 @@ def solve(program: Restricted, weights: Array, *, tolerance: float, stop: Callab
     matrices = program.matrices(rows, weights)
     pool, variance = separate(split, matrices, program.limits)
     slack = np.maximum(_covered(program, variance, weights), 1e-3)
-    mu = float(cost.sum() / max((features @ (_gradients(program, pool).T @ (1.0 / slack))).sum(), FLOOR))
+    gradients = _gradients(program, pool)[:len(pool)]
+    mu = float(cost.sum() / max((features @ (gradients.T @ (1.0 / slack[:len(pool)]))).sum(), FLOOR))
     at = _Iterate(weights, slack, mu / slack, mu / weights, mu / (1.0 - weights))
-    best, best_bound, idle = Point(weights, at.y[:len(pool)], at.y[len(pool):], pool), -np.inf, 0
+    best, best_bound = Point(weights, at.y[:len(pool)], at.y[len(pool):], pool), -np.inf
+    least, idle = np.inf, 0
     for _ in range(MOST_STEPS):
         vectors = _gradients(program, pool)
         primal, price = _covered(program, variance, at.w) - at.slack, features @ (vectors.T @ at.y)
         income = float(np.append(pool.right_hand_side, program.level) @ at.y)
         scale, bound = best_scale(income, cost, price)
-        idle = 0 if bound > best_bound else idle + 1
+        idle = 0 if bound > best_bound or at.mean() < least else idle + 1
+        if at.mean() < least:
+            least, best = at.mean(), replace(best, weights=at.w)
         if bound > best_bound:
-            best_bound = bound
-            best = Point(at.w, scale * at.y[:len(pool)], scale * at.y[len(pool):], pool)
+            best_bound, best = bound, Point(best.weights, scale * at.y[:len(pool)], scale * at.y[len(pool):], pool)
         value = float(cost @ at.w)
         if (value - bound <= tolerance * value and np.abs(primal).max() <= tolerance) or idle > MOST_IDLE or stop():
             break
@@ -202,7 +207,9 @@ def solve(program: Restricted, weights: Array, *, tolerance: float, stop: Callab
             break
         now, mean = at.products(), at.mean()
         guess = newton.step(*(-product for product in now))
-        target = mean * min(CENTRING, (at.moved(guess, *at.reach(guess)).mean() / mean) ** 3)
+        owed = float(at.y @ np.abs(primal) + at.w @ np.abs(newton.tangent.dual))
+        aim = (at.moved(guess, *at.reach(guess)).mean() / mean) ** 3 if owed < MOST_OWED * sum(map(np.sum, now)) else 1.0
+        target = mean * min(CENTRING, aim)
         step = newton.step(target - now[0] - guess.y * guess.slack, target - now[1] - guess.x * guess.w,
                            target - now[2] + guess.t * guess.w)
         at = at.moved(step, *(TO_BOUNDARY * length for length in at.reach(step)))

@@ -132,7 +132,7 @@ class _Bounder:
         """Bounds with the point's duals at their best scale, keeps it if better; returns the reduced costs (n,)."""
         problem, rows = self.problem, point.rows
         kept = np.flatnonzero(point.duals > NEGLIGIBLE * point.duals.max(initial=0.0))
-        rows, y = rows.take(kept), point.duals[kept]
+        rows, y = replace(rows.take(kept), split=self.split), point.duals[kept]  # whose prior has no required sites in it
         price = quadratic_prices(self.split, rows.quadratic(y)) + self.sides.prices(point.rule_duals, problem.n)
         required = problem.required
         income = float(y @ rows.right_hand_side + point.rule_duals @ self.sides.level - price[required].sum())
@@ -245,12 +245,17 @@ def _start(program: Restricted) -> Array:
 
 
 def _nearer(split: Split, problem: SiteProblem, best: Relaxation, weights: Array, worst: float) -> Relaxation:
-    """The relaxation with these weights, lifted until they meet the limits, if they are cheaper than those it has."""
-    for _ in range(MOST_LIFTS):
+    """The relaxation with these weights, if they are cheaper than those it has once they are lifted to meet the limits: by
+    their worst ratio, or where that meets w ≤ 1, towards every allowed site."""
+    share = 0.5**MOST_LIFTS
+    for lift in range(2 * MOST_LIFTS):
         if worst <= FEASIBLE:
             value = float(problem.cost @ weights)
             return replace(best, weights=weights, value=value) if value < best.value else best
-        weights = np.minimum(1.0, worst * weights)
+        if lift < MOST_LIFTS // 2:
+            weights = np.where(problem.required, 1.0, np.minimum(1.0, worst * weights))
+        else:
+            weights, share = weights + share * (~problem.forbidden - weights), 2.0 * share
         worst = float(_ratios(split, [information(block, weights) for block in split.blocks]).max(initial=0.0))
     return best
 
