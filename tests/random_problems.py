@@ -110,7 +110,8 @@ def allowed(problem, chosen):
     inside[list(chosen)] = True
     counts = [inside[members].sum() for members in problem.rules.members]
     return (not np.any(problem.required & ~inside) and not np.any(problem.forbidden & inside)
-            and all(low <= count <= high for low, count, high in zip(problem.rules.lower, counts, problem.rules.upper))
+            and all(low <= count <= high for low, count, high
+                    in zip(problem.rules.lower, counts, problem.rules.upper, strict=True))
             and (problem.max_sites is None or inside.sum() <= problem.max_sites))
 
 

@@ -189,15 +189,17 @@ def relax(split: Split, problem: SiteProblem, *, seconds: float, progress: Calla
         if progress is not None:
             progress(bounder.best.bound, np.inf)
         missing = np.setdiff1d(np.flatnonzero(ratios > 1.0 + tolerance), limits)
-        if (bounder.best.gap <= tolerance * bounder.best.value and not len(missing)) or ended():
-            break
+        if bounder.best.gap <= tolerance * bounder.best.value and not len(missing):
+            return bounder.best
+        if ended():
+            return replace(bounder.best, interrupted=True)
         limits = np.sort(np.append(limits, missing[np.argsort(-ratios[missing], kind="stable")[:ENTERING_LIMITS]]))
         entering = _entering(free, sites, reduced / problem.cost, rng)
-        if not len(entering) and not len(missing):
+        if not len(entering) and not len(missing):  # rounding is all that is left of the gap
             break
         stay = (reduced[sites] < LEAVES_ABOVE * problem.cost[sites]) | (point.weights > 1e-6)
         sites = np.sort(np.append(sites[stay] if len(sites) < len(free) else sites, entering))
-    return replace(bounder.best, interrupted=ended())
+    return bounder.best
 
 
 def _ratios(split: Split, matrices: list[Array]) -> Array:

@@ -1,0 +1,190 @@
+"""The fewest sites, or the cheapest: bound from below, find from above, and decide what lies between.
+
+1. relaxation   every limit is a family of covering rows; the duals of a few of them bound the cost of every set
+2. counting     n sites of rank m tell at most n·m directions apart
+3. exchange     finds sets; when its cost is the bound rounded up, that is the proof
+4. decision     else the tree settles "can sites of cost c do it?" upward from the bound
+5. D-optimal    among the sets of the least cost, exchange on log det, and a bound on what any of them could reach
+"""
+
+from __future__ import annotations
+
+import time
+from collections.abc import Callable
+from dataclasses import dataclass, field, replace
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from sampler.optimise.blocks import Split, split
+from sampler.optimise.certificate import FORMAT, bound_certificate, counting_certificate
+from sampler.optimise.counting import counting_bound, rules_admit
+from sampler.optimise.exchange import fewest, most_informative
+from sampler.optimise.log_det import log_det, log_det_bound
+from sampler.optimise.problem import SearchResult, SiteProblem
+from sampler.optimise.relaxation import FEASIBLE, Relaxation, relax
+from sampler.optimise.tree import decide
+
+Progress = Callable[[float, float], None]
+Indices = NDArray[np.int64]
+
+ROUNDING = 1e-7
+"""A bound this little above a whole number, relatively, is not rounded up."""
+FIRST_TURN = 0.2
+TURN_GROWTH = 3.0
+"""Seconds that exchange, and then the tree, work before the other has its turn, and how they grow. They do not depend on
+the time limit, so a longer search begins with what a shorter one does."""
+POLISH_SHARE = 0.1
+LEAST_POLISH = 0.5
+"""Of the time limit this share is kept for log det; when the proof was quick, this many seconds are spent on it."""
+
+
+@dataclass(slots=True)
+class _Standing:
+    """The interval as it stands: no set costs less than `bound`; `chosen` costs `cost`."""
+
+    problem: SiteProblem
+    began: float
+    progress: Progress | None
+    bound: float = 0.0
+    cost: float = np.inf
+    chosen: Indices | None = None
+    proofs: list[dict[str, Any]] = field(default_factory=list)
+    history: list[tuple[float, float, float]] = field(default_factory=list)
+
+    def prove(self, bound: float, certificate: dict[str, Any] | None) -> None:
+        """Raises the bound if there is a certificate for more than is known."""
+        if certificate is not None and bound > self.bound:
+            self.bound = bound
+            self.proofs.append(certificate)
+            self._tell()
+
+    def offer(self, chosen: Indices | None) -> None:
+        """Takes a set that meets limits and rules if it is the cheapest so far."""
+        if chosen is not None and self.problem.cost[chosen].sum() < self.cost:
+            self.chosen, self.cost = np.sort(chosen), float(self.problem.cost[chosen].sum())
+            self._tell()
+
+    def _tell(self) -> None:
+        self.history.append((time.monotonic() - self.began, self.bound, self.cost))
+        if self.progress is not None:
+            self.progress(self.bound, self.cost)
+
+    def result(self, status: str, *, log_det: float = np.nan, log_det_bound: float = np.nan, worst_ratio: float = np.nan,
+               interrupted: bool = False) -> SearchResult:
+        return SearchResult(self.chosen, status, self.bound, {"format": FORMAT, "proofs": self.proofs}, log_det,
+                            log_det_bound, tuple(self.history), time.monotonic() - self.began, interrupted, worst_ratio)
+
+
+def search(problem: SiteProblem, *, seconds: float, seed: int, progress: Progress | None = None,
+           stop: Callable[[], bool] | None = None, warm: SearchResult | None = None) -> SearchResult:
+    """The cheapest set of sites that meets limits and rules, with what is proven about it; see SearchResult.
+
+    `stop()` true, or the end of `seconds`, ends the search with the best set and the bound so far. `warm`: the result of a
+    like problem on the same sites; its set is used if it meets this one's limits.
+    """
+    began = time.monotonic()
+    order = np.argsort(problem.key, kind="stable")
+    ordered = problem if np.array_equal(order, np.arange(problem.n)) else _reordered(problem, order)
+    place = np.argsort(order)
+    start = None if warm is None or warm.chosen is None else np.sort(place[warm.chosen])
+    result = _search(ordered, began, began + seconds, np.random.default_rng(seed), progress, stop, start)
+    return result if result.chosen is None else replace(result, chosen=np.sort(order[result.chosen]))
+
+
+def _reordered(problem: SiteProblem, order: Indices) -> SiteProblem:
+    place = np.argsort(order)
+    rules = replace(problem.rules, members=tuple(np.sort(place[members]) for members in problem.rules.members))
+    return replace(problem, blocks=problem.blocks[order], cost=problem.cost[order], required=problem.required[order],
+                   forbidden=problem.forbidden[order], key=problem.key[order], rules=rules)
+
+
+def _search(problem: SiteProblem, began: float, until: float, rng: np.random.Generator, progress: Progress | None,
+            stop: Callable[[], bool] | None, start: Indices | None) -> SearchResult:
+    def ended() -> bool:
+        return time.monotonic() >= until or (stop is not None and stop())
+
+    standing = _Standing(problem, began, progress)
+    if not rules_admit(problem):
+        return standing.result("rules")
+    parts = split(problem)
+    relaxed = relax(parts, problem, seconds=until - time.monotonic(), progress=progress, stop=stop)
+    if relaxed.worst_ratio**2 > FEASIBLE:
+        return standing.result("cannot", worst_ratio=relaxed.worst_ratio)
+    standing.prove(relaxed.bound, _linear_certificate(problem, relaxed))
+    step = cost_step(problem.cost)
+    counted = counting_bound(parts, problem)
+    if step is not None and counted > standing.bound:
+        standing.prove(counted, counting_certificate(parts, problem, rounded_up(counted, step) - step))
+    for known in (start, np.flatnonzero(~problem.forbidden)):
+        if known is not None and meets(parts, problem, known):
+            standing.offer(known)
+
+    _close(standing, parts, relaxed, step, rng, until - POLISH_SHARE * (until - began), stop)
+    if standing.chosen is None:
+        return standing.result("rules" if standing.bound > most_cost(problem) else "interval", interrupted=ended())
+    proven = rounded_up(standing.bound, step) >= standing.cost * (1.0 - ROUNDING)
+    polished = min(until, max(time.monotonic() + LEAST_POLISH, began + (1.0 + POLISH_SHARE) * (time.monotonic() - began)))
+    standing.chosen = np.sort(most_informative(parts, problem, standing.chosen, rng=rng.spawn(1)[0], deadline=polished, stop=stop))
+    reach = log_det_bound(parts, problem, len(standing.chosen), rows=relaxed.rows, deadline=until).value
+    return standing.result("proven" if proven else "interval", log_det=log_det(parts, problem, standing.chosen),
+                           log_det_bound=reach, interrupted=not proven and ended())
+
+
+def _close(standing: _Standing, parts: Split, relaxed: Relaxation, step: float | None, rng: np.random.Generator,
+           until: float, stop: Callable[[], bool] | None) -> None:
+    """Exchange from above and the tree from below, in turns, until they meet or time ends."""
+    problem, turn = standing.problem, FIRST_TURN
+    while time.monotonic() < until and not (stop is not None and stop()):
+        least = rounded_up(standing.bound, step)
+        if least >= standing.cost * (1.0 - ROUNDING) or least > most_cost(problem):
+            return
+        standing.offer(fewest(parts, problem, weights=relaxed.weights, reduced_costs=relaxed.reduced_costs,
+                              upper=standing.cost if standing.chosen is not None else None, lower=least, rng=rng.spawn(1)[0],
+                              deadline=min(until, time.monotonic() + turn), stop=stop, on_found=standing.offer))
+        if step is None:
+            turn *= TURN_GROWTH
+        elif least < standing.cost * (1.0 - ROUNDING):
+            decision = decide(parts, problem, least, rows=relaxed.rows, weights=relaxed.weights, stop=stop,
+                              seconds=max(0.0, min(until - time.monotonic(), turn)))
+            standing.offer(decision.chosen)
+            if decision.status == "impossible":
+                standing.prove(least + step, decision.certificate)
+            else:
+                turn *= TURN_GROWTH
+
+
+def _linear_certificate(problem: SiteProblem, relaxed: Relaxation) -> dict[str, Any]:
+    z, limit = relaxed.rows.in_own_terms(problem)
+    rules = tuple((int(rule), -float(relaxed.rule_duals[rule])) for rule in np.flatnonzero(relaxed.rule_duals))
+    return bound_certificate(problem, relaxed.bound, limit, z, relaxed.duals, rules)
+
+
+def meets(parts: Split, problem: SiteProblem, chosen: Indices) -> bool:
+    """Whether the chosen sites meet every limit and rule."""
+    inside = np.zeros(problem.n, bool)
+    inside[chosen] = True
+    counts = np.array([inside[members].sum() for members in problem.rules.members])
+    return bool(not np.any(problem.required & ~inside) and not np.any(problem.forbidden & inside)
+                and np.all(counts >= problem.rules.lower) and np.all(counts <= problem.rules.upper)
+                and (problem.max_sites is None or len(chosen) <= problem.max_sites)
+                and np.all(parts.ratios(chosen) <= FEASIBLE))
+
+
+def most_cost(problem: SiteProblem) -> float:
+    """What the dearest set within max_sites costs; a bound above it says that no set will do."""
+    allowed = np.sort(problem.cost[~problem.forbidden])[::-1]
+    return float(allowed[:problem.max_sites].sum()) * (1.0 + ROUNDING)
+
+
+def cost_step(cost: NDArray[np.float64]) -> float | None:
+    """The number of which every set's cost is a whole multiple, when costs are whole numbers; else None."""
+    if len(cost) and np.all(cost == np.rint(cost)) and cost.max() < 2**31:
+        return float(np.gcd.reduce(cost.astype(np.int64)))
+    return None
+
+
+def rounded_up(bound: float, step: float | None) -> float:
+    """The least cost that the bound leaves possible."""
+    return bound if step is None else step * float(np.ceil(bound / step * (1.0 - ROUNDING) - ROUNDING))
