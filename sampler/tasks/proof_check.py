@@ -125,7 +125,7 @@ class _Walk:
         self.claim = float(certificate["excludes"] if self.kind == "tree" else certificate["lower_bound"])
         if not np.isfinite(self.claim):
             raise CertificateError("certificate: the claim is not finite")
-        n, m, p = evidence.blocks.shape
+        n, _, p = evidence.blocks.shape
         self.largest = np.abs(evidence.blocks).max(axis=(0, 1), initial=0.0)
         self.z = _finite(certificate["rows"]["z"], "rows.z").reshape(-1, p)
         self.income = self._income(evidence.directions(certificate["rows"]))
