@@ -10,7 +10,7 @@ from __future__ import annotations
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.optimize import LinearConstraint, milp
+from scipy.optimize import Bounds, LinearConstraint, milp
 from scipy.sparse import csr_array
 
 from sampler.optimise.blocks import Split
@@ -81,6 +81,6 @@ def rules_admit(problem: SiteProblem) -> bool:
     start = np.concatenate([[0], np.cumsum([len(places) for places in at])])
     matrix = csr_array((np.ones(start[-1]), np.concatenate(at), start), shape=(len(rules), len(pattern)))
     low, high = (np.array([rule[side] for rule in rules]) - fixed for side in (1, 2))
-    found = milp(np.zeros(len(pattern)), integrality=np.ones(len(pattern)), bounds=(0, size),
+    found = milp(np.zeros(len(pattern)), integrality=np.ones(len(pattern), int), bounds=Bounds(0.0, size.astype(float)),
                  constraints=LinearConstraint(matrix, low, high))
     return bool(found.status != NO_SOLUTION)

@@ -77,8 +77,8 @@ class SearchResult:
     `chosen` sorted indices, or None when no set was found. `status`: "proven" (fewest proven), "interval" (bound
     below the count, or time ended), "cannot" (even all candidates fail: `worst_ratio` with all of them > 1),
     "rules" (the rules admit no set). `lower_bound` is a valid bound on the cost of any set that meets limits and rules;
-    `certificate`: its `proofs` in rising order, each as certificate.py lays it out. `log_det` of the information on the
-    terms of interest; `log_det_bound` an upper bound over all sets of the same count that meet the limits (NaN if not computed).
+    `certificate`: its proof, as certificate.py lays it out. `log_det` of the information on the terms of interest;
+    `log_det_bound` an upper bound over all sets of the same count that meet the limits (NaN if not computed).
     """
 
     chosen: NDArray[np.int64] | None

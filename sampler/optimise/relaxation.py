@@ -141,7 +141,7 @@ class _Bounder:
         if bound > self.best.bound:
             rules = np.bincount(self.sides.rule, weights=scale * self.sides.sign * point.rule_duals,
                                 minlength=len(self.best.rule_duals))
-            self.best = replace(self.best, bound=bound, rows=rows, duals=scale * y, rule_duals=rules,
+            self.best = replace(self.best, bound=bound, rows=rows, duals=scale * y, rule_duals=np.asarray(rules, np.float64),
                                 reduced_costs=problem.cost - scale * price)
         return problem.cost - price
 

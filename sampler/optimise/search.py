@@ -18,7 +18,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from sampler.optimise.blocks import Split, split
-from sampler.optimise.certificate import FORMAT, bound_certificate, counting_certificate
+from sampler.optimise.certificate import bound_certificate, counting_certificate
 from sampler.optimise.counting import counting_bound, rules_admit
 from sampler.optimise.exchange import fewest, most_informative
 from sampler.optimise.log_det import log_det, log_det_bound
@@ -50,14 +50,14 @@ class _Standing:
     bound: float = 0.0
     cost: float = np.inf
     chosen: Indices | None = None
-    proofs: list[dict[str, Any]] = field(default_factory=list)
+    certificate: dict[str, Any] = field(default_factory=dict)
     history: list[tuple[float, float, float]] = field(default_factory=list)
 
     def prove(self, bound: float, certificate: dict[str, Any] | None) -> None:
         """Raises the bound if there is a certificate for more than is known."""
         if certificate is not None and bound > self.bound:
             self.bound = bound
-            self.proofs.append(certificate)
+            self.certificate = certificate
             self._tell()
 
     def offer(self, chosen: Indices | None) -> None:
@@ -73,8 +73,8 @@ class _Standing:
 
     def result(self, status: str, *, log_det: float = np.nan, log_det_bound: float = np.nan, worst_ratio: float = np.nan,
                interrupted: bool = False) -> SearchResult:
-        return SearchResult(self.chosen, status, self.bound, {"format": FORMAT, "proofs": self.proofs}, log_det,
-                            log_det_bound, tuple(self.history), time.monotonic() - self.began, interrupted, worst_ratio)
+        return SearchResult(self.chosen, status, self.bound, self.certificate, log_det, log_det_bound, tuple(self.history),
+                            time.monotonic() - self.began, interrupted, worst_ratio)
 
 
 def search(problem: SiteProblem, *, seconds: float, seed: int, progress: Progress | None = None,
@@ -115,8 +115,9 @@ def _search(problem: SiteProblem, began: float, until: float, rng: np.random.Gen
     standing.prove(relaxed.bound, _linear_certificate(problem, relaxed))
     step = cost_step(problem.cost)
     counted = counting_bound(parts, problem)
-    if step is not None and counted > standing.bound:
-        standing.prove(counted, counting_certificate(parts, problem, rounded_up(counted, step) - step))
+    if step is not None and rounded_up(counted, step) > rounded_up(standing.bound, step):
+        counted = rounded_up(counted, step)
+        standing.prove(counted, counting_certificate(parts, problem, counted - step))
     for known in (start, np.flatnonzero(~problem.forbidden)):
         if known is not None and meets(parts, problem, known):
             standing.offer(known)
@@ -125,11 +126,13 @@ def _search(problem: SiteProblem, began: float, until: float, rng: np.random.Gen
     if standing.chosen is None:
         return standing.result("rules" if standing.bound > most_cost(problem) else "interval", interrupted=ended())
     proven = rounded_up(standing.bound, step) >= standing.cost * (1.0 - ROUNDING)
-    polished = min(until, max(time.monotonic() + LEAST_POLISH, began + (1.0 + POLISH_SHARE) * (time.monotonic() - began)))
-    standing.chosen = np.sort(most_informative(parts, problem, standing.chosen, rng=rng.spawn(1)[0], deadline=polished, stop=stop))
-    reach = log_det_bound(parts, problem, len(standing.chosen), rows=relaxed.rows, deadline=until).value
+    now = time.monotonic()
+    polished = min(until, now + max(LEAST_POLISH, POLISH_SHARE * (now - began)))
+    standing.chosen = np.sort(most_informative(parts, problem, standing.chosen, rng=rng.spawn(1)[0], deadline=polished,
+                                               stop=stop))
+    reach = log_det_bound(parts, problem, len(standing.chosen), rows=relaxed.rows, deadline=until)
     return standing.result("proven" if proven else "interval", log_det=log_det(parts, problem, standing.chosen),
-                           log_det_bound=reach, interrupted=not proven and ended())
+                           log_det_bound=reach.value, interrupted=not proven and ended())
 
 
 def _close(standing: _Standing, parts: Split, relaxed: Relaxation, step: float | None, rng: np.random.Generator,
@@ -141,8 +144,9 @@ def _close(standing: _Standing, parts: Split, relaxed: Relaxation, step: float |
         if least >= standing.cost * (1.0 - ROUNDING) or least > most_cost(problem):
             return
         standing.offer(fewest(parts, problem, weights=relaxed.weights, reduced_costs=relaxed.reduced_costs,
-                              upper=standing.cost if standing.chosen is not None else None, lower=least, rng=rng.spawn(1)[0],
-                              deadline=min(until, time.monotonic() + turn), stop=stop, on_found=standing.offer))
+                              upper=None if standing.chosen is None else standing.cost, lower=least,
+                              rng=rng.spawn(1)[0], deadline=min(until, time.monotonic() + turn), stop=stop,
+                              on_found=standing.offer))
         if step is None:
             turn *= TURN_GROWTH
         elif least < standing.cost * (1.0 - ROUNDING):
