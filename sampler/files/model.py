@@ -1,0 +1,93 @@
+"""Names of terms in study files: families, grids, cells."""
+
+from __future__ import annotations
+
+import re
+from collections.abc import Iterable, Sequence
+
+from sampler.files.faults import Faults, did_you_mean
+from sampler.files.schema import Values
+from sampler.model.basis import Model, ModelTerm
+from sampler.model.terms import FAMILIES, TERMS
+from sampler.panel.layout import Grid
+
+NAMES = [*TERMS, *FAMILIES]
+QUALIFIED = re.compile(r"(?P<grid>[^.\[\]]+)(\[(?P<cell>[^\]]*)\])?\.(?P<term>.+)")
+
+
+def model(values: Values, grids: Sequence[Grid] | None, faults: Faults) -> Model | None:
+    """The model of a `[model]` table, or None with every fault added; `grids` None when the layout is not known."""
+    before = len(faults.messages)
+    terms = [ModelTerm(term) for term in _expanded(values.get("panel") or (), "[model] panel", faults)]
+    for name, part in values.items():
+        if name == "panel" or part is None:
+            continue
+        place = f"[model.{name}]"
+        if part["shared"] is None and part["each"] is None:
+            faults.add(f"{place} has neither shared nor each; give the terms that its cells share in shared, or those that "
+                       "each cell has of its own in each")
+        shared = _expanded(part["shared"] or (), f"{place} shared", faults)
+        each = _expanded(part["each"] or (), f"{place} each", faults)
+        for both in [term for term in shared if term in each]:
+            faults.add(f'{place} has "{both}" in shared and in each; keep one')
+        terms += [ModelTerm(term, name) for term in shared]
+        grid = None if grids is None else _grid(name, place, grids, faults)
+        if grid is not None:
+            terms += [ModelTerm(term, name, cell, grid.cell_label(cell)) for cell in range(grid.cells) for term in each]
+    if not terms and len(faults.messages) == before:
+        faults.add("[model] has no terms; give panel a list of terms or families")
+    return None if len(faults.messages) > before else Model(tuple(terms))
+
+
+def limited_terms(names: Sequence[str], given: Model, grids: Sequence[Grid] | None, place: str,
+                  faults: Faults) -> tuple[str, ...]:
+    """The terms of a model that names, families or "all" mean, in the model's order, without repeats."""
+    wanted: set[str] = set()
+    for name in names:
+        if name == "all":
+            wanted |= set(given.names)
+            continue
+        match = QUALIFIED.fullmatch(name)
+        grid, cell, term = (match["grid"], match["cell"], match["term"]) if match else (None, None, name)
+        if grid is not None and grids is not None:
+            known = _grid(grid, f'{place} "{name}"', grids, faults)
+            if known is None:
+                continue
+            labels = [known.cell_label(index) for index in range(known.cells)]
+            if cell is not None and cell not in labels:
+                faults.add(f'{place} "{name}": "{cell}" is not a cell of {grid}; the cells are {labels[0]} to {labels[-1]}')
+                continue
+        for one in _expanded([term], place, faults):
+            found = [item.name for item in given.terms
+                     if item.term == one and item.grid == grid and (cell is None or item.cell_label == cell)]
+            wanted |= set(found)
+            if not found:
+                of = "" if term == one else f' (of "{name}")'
+                full = f"{name.removesuffix(term)}{one}"
+                faults.add(f'{place} limits "{full}"{of}, which the model does not have; '
+                           + did_you_mean(full, [other for other in given.names if other not in names],
+                                          "add it to [model] or drop the limit"))
+    return tuple(name for name in given.names if name in wanted)
+
+
+def _expanded(names: Iterable[str], place: str, faults: Faults) -> list[str]:
+    """Single terms of names and families, without repeats."""
+    terms: dict[str, None] = {}
+    for name in names:
+        if name in FAMILIES:
+            terms |= dict.fromkeys(FAMILIES[name])
+        elif name in TERMS:
+            terms[name] = None
+        else:
+            faults.add(f'{place} "{name}" is not a term or family; '
+                       + did_you_mean(name, NAMES, f"the families are {', '.join(FAMILIES)}"))
+    return list(terms)
+
+
+def _grid(name: str, place: str, grids: Sequence[Grid], faults: Faults) -> Grid | None:
+    names = [grid.name for grid in grids]
+    if name in names:
+        return grids[names.index(name)]
+    faults.add(f'{place}: "{name}" is not a grid of the layout; '
+               + did_you_mean(name, names, "the grids are " + ", ".join(names) if names else "the layout has no grids"))
+    return None
