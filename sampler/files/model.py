@@ -10,6 +10,7 @@ from sampler.files.schema import Values
 from sampler.model.basis import Model, ModelTerm
 from sampler.model.terms import FAMILIES, TERMS
 from sampler.panel.layout import Grid
+from sampler.tasks.study import Potential
 
 NAMES = [*TERMS, *FAMILIES]
 QUALIFIED = re.compile(r"(?P<grid>[^.\[\]]+)(\[(?P<cell>[^\]]*)\])?\.(?P<term>.+)")
@@ -20,7 +21,7 @@ def model(values: Values, grids: Sequence[Grid] | None, faults: Faults) -> Model
     before = len(faults.messages)
     terms = [ModelTerm(term) for term in _expanded(values.get("panel") or (), "[model] panel", faults)]
     for name, part in values.items():
-        if name == "panel" or part is None:
+        if name in ("panel", "potential") or part is None:
             continue
         place = f"[model.{name}]"
         if part["shared"] is None and part["each"] is None:
@@ -34,12 +35,23 @@ def model(values: Values, grids: Sequence[Grid] | None, faults: Faults) -> Model
         grid = None if grids is None else _grid(name, place, grids, faults)
         if grid is not None:
             terms += [ModelTerm(term, name, cell, grid.cell_label(cell)) for cell in range(grid.cells) for term in each]
-    if not terms and len(faults.messages) == before:
+    if not terms and values["panel"] is not None and len(faults.messages) == before:
         faults.add("[model] has no terms; give panel a list of terms or families")
     return None if len(faults.messages) > before else Model(tuple(terms))
 
 
-def limited_terms(names: Sequence[str], given: Model, grids: Sequence[Grid] | None, place: str,
+def potential(values: Values | None, given: Model, faults: Faults) -> Potential | None:
+    """The terms of `[model.potential]` that the model does not correct anyway."""
+    if values is None:
+        return None
+    terms = [term for term in _expanded(values["terms"] or (), "[model.potential] terms", faults)
+             if term not in given.names]
+    if not terms and values["terms"] is not None:
+        faults.add("[model.potential] terms are all in [model] already; give terms that are not corrected")
+    return Potential(Model(tuple(ModelTerm(term) for term in terms)), values["sd_um"])
+
+
+def named_terms(names: Sequence[str], given: Model, grids: Sequence[Grid] | None, place: str,
                   faults: Faults) -> tuple[str, ...]:
     """The terms of a model that names, families or "all" mean, in the model's order, without repeats."""
     wanted: set[str] = set()
@@ -64,9 +76,9 @@ def limited_terms(names: Sequence[str], given: Model, grids: Sequence[Grid] | No
             if not found:
                 of = "" if term == one else f' (of "{name}")'
                 full = f"{name.removesuffix(term)}{one}"
-                faults.add(f'{place} limits "{full}"{of}, which the model does not have; '
+                faults.add(f'{place} name "{full}"{of}, which the model does not have; '
                            + did_you_mean(full, [other for other in given.names if other not in names],
-                                          "add it to [model] or drop the limit"))
+                                          "add it to [model] or drop it here"))
     return tuple(name for name in given.names if name in wanted)
 
 

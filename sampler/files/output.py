@@ -23,7 +23,7 @@ from sampler.panel.layout import Layout, Sites
 from sampler.tasks.results import Audit, AuditedLimit, Plan, SiteAudit
 from sampler.tasks.study import Study
 
-RESULT_FILES = ("plan.json", "audit.json", "sites.csv", "map.png", "map.svg")
+RESULT_FILES = ("plan.json", "certificate.json", "audit.json", "sites.csv", "map.png", "map.svg")
 """Files that a result consists of: a new result in the same folder replaces or removes them all."""
 COORDINATE_DIGITS = 9
 """Digits after the point of mm: the noise of moving the origin goes, a femtometre stays."""
@@ -37,7 +37,7 @@ def plan_json(plan: Plan) -> str:
     cannot = plan.status == "cannot"
     sites = plan.sites.take(np.zeros(0, np.int64)) if cannot else plan.sites
     return _json({
-        **_provenance(plan.study), "candidates": len(plan.candidates.sites), "n_sites": len(sites),
+        **_provenance(plan.study), **_certificate(plan.certificate), "candidates": len(plan.candidates.sites), "n_sites": len(sites),
         "lower_bound": _finite(plan.lower_bound), "fewest_proven": plan.fewest_proven, "status": plan.status,
         "log_det": None if cannot else _finite(plan.audit.log_det),
         "d_efficiency_at_least": _finite(plan.d_efficiency_at_least),
@@ -92,6 +92,11 @@ def _provenance(study: Study) -> dict[str, Any]:
             "study": {"path": study.source.path, "sha256": study.source.sha256},
             "layout": {"path": study.layout_source.path, "sha256": study.layout_source.sha256},
             "coverage_factor": study.coverage_factor}
+
+
+def _certificate(certificate: dict[str, Any]) -> dict[str, Any]:
+    """Which certificate.json goes with the plan; nothing when its proof was not stated."""
+    return {"certificate": {"sha256": certificate["sha256"]}} if "sha256" in certificate else {}
 
 
 def _audited(layout: Layout, audit: Audit) -> dict[str, Any]:

@@ -10,7 +10,7 @@ import numpy as np
 
 from sampler.files.faults import Faults, did_you_mean
 from sampler.files.layout import layout_file
-from sampler.files.model import limited_terms, model
+from sampler.files.model import model, named_terms, potential
 from sampler.files.schema import (
     Bounds,
     Key,
@@ -19,6 +19,7 @@ from sampler.files.schema import (
     format_number,
     number,
     numbers,
+    one_of,
     points,
     read_keys,
     table,
@@ -33,7 +34,7 @@ from sampler.model.basis import Model
 from sampler.panel.candidates import candidates
 from sampler.panel.layout import Layout
 from sampler.panel.outline import counter_clockwise, covered, polygon_fault, shrunk
-from sampler.tasks.study import RegionLimit, Rules, SearchOptions, Source, Study, TermLimit
+from sampler.tasks.study import RegionLimit, Rules, SearchOptions, Source, Study, TermLimit, TermPrior
 from sampler.uncertainty.noise import Noise
 
 A_STUDY = "a study file (TOML)"
@@ -48,19 +49,29 @@ KEYS = (
     Key("layout", text, "the path of the layout file, relative to this file"),
     Key("coverage_factor", number(Bounds(above=0)), default=3.0),
     Key("model", table(
-        Key("panel", texts),
+        Key("panel", texts, default=()),
+        Key("potential", table(
+            Key("terms", texts, "terms or families that are perhaps present"),
+            Key("sd_um", number(Bounds(above=0)), "their standard deviation"),
+        )),
         others=table(Key("shared", texts), Key("each", texts)),
     ), "a table [model]"),
     Key("noise", table(
         Key("mark_um", numbers(2, "[x, y]", Bounds(above=0)), "[x, y], the standard uncertainty of one reading in µm"),
         Key("local_um", numbers(2, "[x, y]", Bounds(at_least=0)), default=(0.0, 0.0)),
+        Key("local_range_mm", number(Bounds(above=0))),
     ), "a table [noise]"),
+    Key("prior", tables(
+        Key("terms", text_or_texts, "names of terms, families or \"all\""),
+        Key("sd", number(Bounds(above=0)), "the standard deviation in the term's unit"),
+    ), default=[]),
     Key("limit", tables(
         Key("terms", text_or_texts),
         Key("max", number(Bounds(above=0))),
         Key("region", text),
         Key("polygon_mm", points(3)),
         Key("position_um", number(Bounds(above=0))),
+        Key("of", one_of("correction", "displacement"), default="correction"),
         least=1,
     ), "at least one table [[limit]]"),
     Key("rules", table(
@@ -83,20 +94,28 @@ def read_study(path: str | Path) -> Study:
     read = layout_file(beside(path, values["layout"]), faults) if values.get("layout") else None
     layout = None if read is None else read.layout
     given = model(values["model"], None if layout is None else layout.grids, faults) if values.get("model") else None
+    perhaps = potential(values["model"]["potential"], given, faults) if given is not None else None
+    priors = [_prior(prior, given, layout, faults) for prior in values.get("prior") or [] if given is not None]
     limits = [_limit(limit, given, layout, faults) for limit in values.get("limit") or []]
     rules = _rules(values.get("rules"), layout, faults)
     if layout is not None:
         _some_candidate(layout, rules.forbidden, faults.of(read.source.path if read else ""))
     faults.close()
     assert toml is not None and read is not None and layout is not None and given is not None
-    search = values["search"]
+    noise, search = values["noise"], values["search"]
     return Study(
         values["title"] or values["name"] or Path(path).stem, layout, given,
-        Noise(values["noise"]["mark_um"], values["noise"]["local_um"]),
+        Noise(noise["mark_um"], noise["local_um"], noise["local_range_mm"]),
         tuple(limit for limit in limits if limit is not None), values["coverage_factor"], rules,
         SearchOptions(search["seconds"], search["seed"]) if search else SearchOptions(),
-        source=Source(shown_path(path), sha256(toml[1])), layout_source=read.source,
+        priors=tuple(priors), potential=perhaps, source=Source(shown_path(path), sha256(toml[1])), layout_source=read.source,
         warnings=tuple(dict.fromkeys(faults.warnings)))
+
+
+def _prior(values: Values, given: Model, layout: Layout | None, faults: Faults) -> TermPrior:
+    terms = named_terms(values["terms"] or (), given, None if layout is None else layout.grids, f"{values['place']} terms",
+                        faults)
+    return TermPrior(terms, values["sd"])
 
 
 def _limit(values: Values, given: Model | None, layout: Layout | None, faults: Faults) -> TermLimit | RegionLimit | None:
@@ -112,8 +131,8 @@ def _limit(values: Values, given: Model | None, layout: Layout | None, faults: F
     elif maximum not in values["present"]:
         faults.add(f"{place} {maximum} is missing; give the largest k·u allowed")
     if kind == "terms":
-        terms = () if given is None else limited_terms(values["terms"], given, None if layout is None else layout.grids,
-                                                       f"{place} terms", faults)
+        terms = () if given is None else named_terms(values["terms"], given, None if layout is None else layout.grids,
+                                                     f"{place} terms", faults)
         return TermLimit(terms, values["max"])
     return _region_limit(values, layout, faults)
 
@@ -138,7 +157,7 @@ def _region_limit(values: Values, layout: Layout | None, faults: Faults) -> Regi
         if region not in allowed:
             faults.add(f'{place} region "{region}" is not known; ' + did_you_mean(region, allowed, "give one of "
                                                                                  + ", ".join(allowed)))
-    return RegionLimit(region, values["position_um"], polygon)
+    return RegionLimit(region, values["position_um"], polygon, values["of"])
 
 
 def _rules(values: Values | None, layout: Layout | None, faults: Faults) -> Rules:
