@@ -2,8 +2,8 @@
 
     OMP_NUM_THREADS=1 python tests/bench/bench_route.py
 
-Optima of TSPLIB instances are published (and confirmed here), those on the machine come from the exact solver of the
-tests; where it runs out of time the gap is to the lower bound, and so at most what is shown.
+Optima of TSPLIB instances are published, that of the lattice is a theorem, both confirmed here; those on the machine
+come from the exact solver of the tests. Where it runs out of time the gap is to the lower bound: at most what is shown.
 """
 
 from __future__ import annotations
@@ -40,7 +40,7 @@ def gaps(name, cost, closed, optimum=None, exact_seconds=120.0):
     worst, slowest = max(run[0] for run in runs), max(run[1] for run in runs)
     bound, bound_seconds = timed(lambda: tour_lower_bound(cost, closed=closed, upper=min(run[0] for run in runs)))
     proven = exact_tour(cost if closed else np.pad(cost, (0, 1)), seconds=exact_seconds)
-    source = "exact" if optimum is None else "published, confirmed" if proven is not None else "published"
+    source = "exact" if optimum is None else "known, confirmed" if proven is not None else "known"
     assert optimum is None or proven is None or abs(proven - optimum) < 1e-6, (name, proven, optimum)
     best = optimum if optimum is not None else proven
     if best is None:

@@ -106,6 +106,15 @@ def test_spacing_raises_the_bound(rng):
         assert apart.constant_s + apart.site_s[rows].sum() <= route.seconds + 1e-9
 
 
+def test_spacing_holds_along_the_diagonal():
+    """Chosen sites one spacing apart at 45°, the quickest direction: both axes move at once."""
+    xy, machine = 10.0 * lattice(13, 13), Machine()
+    rows = np.arange(0, 169, 28)  # (0, 0), (20, 20), …
+    bound = site_seconds_lower(xy, machine, spacing_mm=20 * np.sqrt(2.0))
+    route = plan_route(xy[rows], machine, SIZE, bound=False)
+    assert bound.constant_s + bound.site_s[rows].sum() == pytest.approx(route.seconds)
+
+
 def test_cheapest_moves_exact_or_less(rng):
     """Against all pairs, many more candidates than are looked at; on uneven axes the bound may fall short, not pass."""
     xy = np.vstack([rng.uniform(-250, 250, (300, 2)), np.zeros((40, 2))])

@@ -119,9 +119,9 @@ def test_one_seed_one_answer_and_one_direction(rng):
 
 
 def test_more_kicks_never_hurt(rng):
-    cost = euclidean(rng.uniform(size=(80, 2)))
+    cost = euclidean(rng.uniform(size=(60, 2)))
     lengths = [tour_cost(cost, tour(cost, closed=True, rng=np.random.default_rng(1), iterations=k), True)
-               for k in (0, 50, 200, 1000)]
+               for k in range(0, 300, 12)]
     assert all(later <= earlier + 1e-9 for earlier, later in pairwise(lengths))
     assert lengths[-1] < lengths[0]
 
