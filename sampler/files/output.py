@@ -37,7 +37,8 @@ def plan_json(plan: Plan) -> str:
     cannot = plan.status == "cannot"
     sites = plan.sites.take(np.zeros(0, np.int64)) if cannot else plan.sites
     return _json({
-        **_provenance(plan.study), **_certificate(plan.certificate), "candidates": len(plan.candidates.sites), "n_sites": len(sites),
+        **_provenance(plan.study), **_certificate(plan.certificate), "candidates": len(plan.candidates.sites),
+        "n_sites": len(sites),
         "lower_bound": _finite(plan.lower_bound), "fewest_proven": plan.fewest_proven, "status": plan.status,
         "log_det": None if cannot else _finite(plan.audit.log_det),
         "d_efficiency_at_least": _finite(plan.d_efficiency_at_least),

@@ -54,16 +54,18 @@ def region_points(layout: Layout, region: str, polygon_mm: Array | None, spacing
     low, high = np.array(area.bounds[:2]), np.array(area.bounds[2:])
     raster = _lattice(*(np.linspace(low[axis], high[axis], _count(high[axis] - low[axis], spacing_mm))
                         for axis in (0, 1)))
-    shapely.prepare(area)
-    raster = raster[shapely.contains_xy(area, raster[:, 0], raster[:, 1])]
+    inner = shapely.buffer(area, -EDGE_TOLERANCE_MM, join_style="mitre")
+    shapely.prepare(inner)
+    raster = raster[shapely.contains_xy(inner, raster[:, 0], raster[:, 1])]
     boundary = shapely.get_coordinates(shapely.segmentize(area.boundary, spacing_mm))
     edge_x, edge_y = _edges(layout)
     crossings = _lattice(edge_x, edge_y)
     crossings = crossings[covered(area, crossings)]
     clipped = _boundary_crossings(area, low, high, edge_x, edge_y)
-    special = _distinct(np.concatenate([boundary, crossings, clipped]))
+    on_edge = _near(raster[:, 0], edge_x) | _near(raster[:, 1], edge_y)
+    special = _distinct(np.concatenate([raster[on_edge], boundary, crossings, clipped]))
     wide = shapely.buffer(area, EDGE_TOLERANCE_MM, join_style="mitre")
-    return _joined(layout, _located(layout, raster), _sides(layout, special, lambda xy, cell: covered(wide, xy)))
+    return _joined(layout, _located(layout, raster[~on_edge]), _sides(layout, special, lambda xy, cell: covered(wide, xy)))
 
 
 def inside_region(layout: Layout, region: str, polygon_mm: Array | None, xy_mm: Array) -> NDArray[np.bool_]:
@@ -97,6 +99,16 @@ def _distinct(xy_mm: Array) -> Array:
     """The points without repeats, to the tolerance, in a fixed order."""
     _, first = np.unique(np.rint(xy_mm / EDGE_TOLERANCE_MM), axis=0, return_index=True)
     return xy_mm[first]
+
+
+def _near(value: Array, lines: Array) -> NDArray[np.bool_]:
+    """Which values lie on one of the lines, to the tolerance."""
+    if not len(lines):
+        return np.zeros(len(value), bool)
+    after = np.searchsorted(lines, value)
+    below, above = lines[np.maximum(after - 1, 0)], lines[np.minimum(after, len(lines) - 1)]
+    near: NDArray[np.bool_] = np.minimum(np.abs(value - below), np.abs(value - above)) <= EDGE_TOLERANCE_MM
+    return near
 
 
 def _edges(layout: Layout) -> tuple[Array, Array]:
