@@ -19,7 +19,7 @@ NEIGHBOURS = 8
 LONGEST_MOVED = 3          # Or-opt moves up to this many neighbouring stops at once
 KICK_STRETCH = 50          # a kick reorders within this many positions, so that its repair stays local
 ENUMERATED = 7             # closed tours of so few nodes are enumerated
-RELATIVE_GAIN = 1e-10      # a gain below this part of the largest cost is rounding; it would let equal tours alternate
+RELATIVE_GAIN = 1e-10      # smaller gains, as a part of the largest cost, are rounding: equal tours would alternate
 
 
 def default_iterations(nodes: int) -> int:

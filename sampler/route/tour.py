@@ -17,6 +17,7 @@ from sampler.route.machine import Machine, travel_seconds
 Array = NDArray[np.float64]
 Order = NDArray[np.int64]
 
+
 def tour(cost: Array, *, start: int | None = None, end: int | None = None, closed: bool = False,
          rng: np.random.Generator, iterations: int | None = None) -> Order:
     """A short tour: every node of `cost` (n, n; symmetric, non-negative) once, as an order of indices (n,).
