@@ -7,6 +7,7 @@ from itertools import combinations
 import numpy as np
 
 from sampler.optimise.problem import CountRules, site_problem
+from sampler.tasks.proof_check import Evidence
 
 
 def polynomial(x, y, order):
@@ -124,3 +125,13 @@ def cheapest_by_enumeration(problem):
             if cost < best[0] and allowed(problem, chosen) and variance_ratios(problem, chosen).max() <= 1 + 1e-9:
                 best = (cost, chosen)
     return best
+
+
+def proof_evidence(problem):
+    """The question as the independent checker takes it."""
+    rules = [(np.isin(np.arange(problem.n), members), low, high) for members, low, high
+             in zip(problem.rules.members, problem.rules.lower, problem.rules.upper, strict=True)]
+    rules += [] if problem.max_sites is None else [(np.ones(problem.n, bool), 0, problem.max_sites)]
+    scaled = problem.directions / problem.tau[:, None]
+    return Evidence(problem.blocks, problem.prior_precision, problem.cost, problem.required, problem.forbidden,
+                    tuple(rules), problem.key, lambda rows: scaled[rows["limit"]])

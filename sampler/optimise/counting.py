@@ -30,11 +30,10 @@ def counting_bound(split: Split, problem: SiteProblem) -> float:
         values, vectors = np.linalg.eigh(block.prior)
         unknown = vectors[:, values <= PRIOR_TOLERANCE]
         rank = np.minimum((block.rows != 0.0).any(axis=2).sum(axis=1), unknown.shape[1])
-        for number in range(block.multiplicity):
-            asked = unknown.T @ block.columns[:, block.lift == number]
-            if asked.size:
-                needed = int(np.linalg.matrix_rank(asked / np.linalg.norm(asked, axis=0).max(), RANK_TOLERANCE))
-                best = max(best, _cheapest(rank, needed, problem))
+        asked = unknown.T @ block.columns  # of every equal block: they stand on the same M
+        if asked.size:
+            needed = int(np.linalg.matrix_rank(asked / np.linalg.norm(asked, axis=0).max(), RANK_TOLERANCE))
+            best = max(best, _cheapest(rank, needed, problem))
     return best
 
 
