@@ -47,17 +47,19 @@ class Table:
         return len(self.line)
 
 
-def read_table(path: str | Path, columns: Sequence[Column], faults: Faults | None = None) -> tuple[Table, bytes] | None:
+def read_table(path: str | Path, columns: Sequence[Column], faults: Faults | None = None,
+               header: Sequence[str] | None = None) -> tuple[Table, bytes] | None:
     """A table with its file's bytes, or None with every fault added; without `faults` raises InputError.
 
     Reads what spreadsheets write: UTF-8 with or without mark, UTF-16, Latin-1; any line ends; comma, semicolon or tab;
     decimal commas unless cells are separated by commas; quoted cells; blank lines, blank cells beyond the header,
     extra columns; header names in any case, spaced or with their unit in brackets. Columns come in any order.
+    `header` names the columns of a table whose first line is a row already.
     """
     own = Faults(shown_path(path)) if faults is None else faults.of(shown_path(path))
     before = len(own.messages)
     data = read_bytes(path, f"a CSV file with the columns {', '.join(c.name for c in columns if c.required)}", own)
-    table = None if data is None else _table(data, columns, own)
+    table = None if data is None else _table(data, columns, own, header)
     if faults is None:
         own.close()
     return None if table is None or data is None or len(own.messages) > before else (table, data)
@@ -85,29 +87,47 @@ def _as_utf8(data: bytes) -> bytes:
     return data
 
 
-def _plain_name(name: str) -> str:
+def plain_name(name: str) -> str:
+    """A heading as columns are looked up by: small letters, digits and single underscores."""
     return re.sub(r"[\W_]+", "_", name.strip().casefold()).replace("µ", "u").replace("μ", "u").strip("_")
 
 
-def _table(data: bytes, wanted: Sequence[Column], faults: Faults) -> Table | None:
+def first_rows(path: str | Path, most: int, faults: Faults) -> list[list[str]]:
+    """The cells of the first rows of a table, its header included, blank rows left out; none with the fault added."""
+    data = read_bytes(path, "a CSV file with a row for each mark", faults)
+    if data is None:
+        return []
+    lines = _as_utf8(data).decode().strip("\n \t,;").split("\n")[:2 * most]
+    delimiter = max(",;\t", key=QUOTED.sub("", lines[0]).count)
+    try:
+        rows = [row for row in csv.reader(lines, delimiter=delimiter) if any(cell.strip() for cell in row)]
+    except csv.Error as error:
+        faults.add(f"the first rows cannot be read ({error}); mend their quotes")
+        return []
+    if not rows:
+        faults.add("the table has no rows; give one row for each mark")
+    return rows[:most]
+
+
+def _table(data: bytes, wanted: Sequence[Column], faults: Faults, named: Sequence[str] | None = None) -> Table | None:
     data = _as_utf8(data)
     skip = len(data) - len(data.lstrip(b"\n \t,;"))
-    above = data[:skip].count(b"\n")  # blank lines above the header
+    above = data[:skip].count(b"\n")  # blank lines, and then the header
     start = data.rfind(b"\n", 0, skip) + 1
     first = data[start:].split(b"\n", 1)[0].decode()
     bare = QUOTED.sub("", first)
     delimiter = max(",;\t", key=bare.count)
-    header = [_plain_name(name) for name in next(csv.reader([first], delimiter=delimiter))]
+    header = [plain_name(name) for name in named or next(csv.reader([first], delimiter=delimiter))]
     columns = _wanted(header, wanted, faults)
     if columns is None:
         return None
-    body = data[start + len(first.encode()) + 1:]
+    body = data[start + (0 if named else len(first.encode()) + 1):]
+    above += 0 if named else 1
     if not body.strip(b"\n \t,;\""):
         faults.add("the table has no rows; give one row for each mark")
         return None
-    cells, line = _fast(body, delimiter, len(header), columns) or _careful(body, delimiter, len(header), columns, above + 1,
-                                                                              faults)
-    line = line + above + 1  # the body begins on the line after the header
+    cells, line = _fast(body, delimiter, len(header), columns) or _careful(body, delimiter, len(header), columns, above, faults)
+    line = line + above  # the body begins below these
     cells = {name: pc.utf8_trim_whitespace(column) for name, column in cells.items()}
     filled = np.zeros(len(line), bool)
     for column in cells.values():

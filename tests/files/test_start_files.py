@@ -133,7 +133,7 @@ def test_a_bad_cell_far_down_is_named_with_its_line(tmp_path):
     assert len(caught.value.faults) == 1
 
 
-@pytest.mark.parametrize("content", [b"", b"\0\0\1", b"\n\n"])
+@pytest.mark.parametrize("content", [b"", b"\0\0\1", b"\n\n", b";;\n;;\n", b'x,y\n', b"x,y\n\"" + b"a" * 200_000])
 def test_files_that_are_no_table(tmp_path, content):
     (tmp_path / "a.csv").write_bytes(content)
     with pytest.raises(InputError):
