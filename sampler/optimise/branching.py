@@ -14,6 +14,8 @@ from sampler.optimise.problem import SiteProblem
 Array = NDArray[np.float64]
 Indices = NDArray[np.int64]
 
+PRE = lambda part, gap: part * gap
+PER = 3
 SQUARE, NAMED = -1, -2
 TRIALS = 10
 """How many splits are tried with a linear program each before one is taken."""
@@ -85,8 +87,8 @@ class Splits:
             gap = np.diff(values)
             part = cumulated[:-1] - np.floor(cumulated[:-1] + 1e-6)
             part = np.minimum(part, 1 - part)
-            score = part * gap
-            for at in np.argsort(-score, kind="stable")[:3]:
+            score = PRE(part, gap)
+            for at in np.argsort(-score, kind="stable")[:PER]:
                 if part[at] > 1e-5 and gap[at] > 1e-7:
                     inside = tuple(sorted(order[: at + 1].tolist()))
                     found.append((float(score[at]), index, values[at] * spread, values[at + 1] * spread,

@@ -70,6 +70,9 @@ class _Node:
     w: Array  # the parent's weights, on `sites`
 
 
+SCORE = lambda hi, lo, t: max(t - max(hi, 0.99), 1e-4) * max(t - max(lo, 0.99), 1e-4)
+
+
 class Tree:
     """The search for one count. Sites are in the order of their keys; `order` maps back."""
 
@@ -280,6 +283,7 @@ class Tree:
         best_ratio = np.inf
         last_t = np.inf
         slow = 0
+        sites, w = node.sites, node.w
         for _ in range(MOST_ROUNDS):
             if stop():
                 break
@@ -405,12 +409,13 @@ class Tree:
         if not options:
             return None
         at = self.program.sites
+        t = self.program.solver.getInfo().objective_function_value * -1
         best, best_score = None, -np.inf
         for half in options:
             low, high = self.program.trial(half.mask[at], half.at_most)
-            score = min(low, high) * 0.2 + max(low, high)
-            if -score > best_score:
-                best, best_score = half, -score
+            score = SCORE(max(low, high), min(low, high), t)
+            if score > best_score:
+                best, best_score = half, score
         return best
 
     def _worst(self, sites: Indices, w: Array) -> list[tuple[int, Array]]:
