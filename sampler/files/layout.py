@@ -133,6 +133,7 @@ def layout_file(path: str | Path, faults: Faults) -> LayoutFile | None:
     grids = _grids(values["grid"] or [], origin, faults)
     keep_outs = _keep_outs(values["keep_out"] or [], origin, faults)
     groups, files = [], []
+    _each_file_once(values["marks"] or [], faults)
     for group in values["marks"] or []:
         marks, data = _marks(group, path, grids, origin, values["panel"], faults)
         groups += [] if marks is None else [marks]
@@ -228,6 +229,15 @@ def _keep_outs(listed: list[Values], origin: tuple[float, float], faults: Faults
         else:
             keep_outs.append(KeepOut(name, counter_clockwise(corners + np.array(origin))))
     return keep_outs
+
+
+def _each_file_once(groups: list[Values], faults: Faults) -> None:
+    first: dict[str, Values] = {}
+    for group in groups:
+        name = group["file"]
+        if name is not None and first.setdefault(name, group) is not group:
+            faults.add(f'{group["place"]} file "{name}" is already read by {first[name]["place"]}; name each file once')
+            group["file"] = None
 
 
 def _marks(group: Values, path: str | Path, grids: list[Grid], origin: tuple[float, float], panel: Values | None,

@@ -69,16 +69,19 @@ def named_terms(names: Sequence[str], given: Model, grids: Sequence[Grid] | None
             if cell is not None and cell not in labels:
                 faults.add(f'{place} "{name}": "{cell}" is not a cell of {grid}; the cells are {labels[0]} to {labels[-1]}')
                 continue
+        lacking = []
         for one in _expanded([term], place, faults):
             found = [item.name for item in given.terms
                      if item.term == one and item.grid == grid and (cell is None or item.cell_label == cell)]
             wanted |= set(found)
-            if not found:
-                of = "" if term == one else f' (of "{name}")'
-                full = f"{name.removesuffix(term)}{one}"
-                faults.add(f'{place} name "{full}"{of}, which the model does not have; '
-                           + did_you_mean(full, [other for other in given.names if other not in names],
-                                          "add it to [model] or drop it here"))
+            lacking += [] if found else [one]
+        if lacking == [term]:
+            spare = [other for other in given.names if other not in names]
+            faults.add(f'{place} name "{name}", which the model does not have; '
+                       + did_you_mean(name, spare, "add it to [model] or drop it here"))
+        elif lacking:
+            faults.add(f'{place} name "{name}", but the model does not have {", ".join(lacking)}; add them to [model] or name '
+                       "single terms")
     return tuple(name for name in given.names if name in wanted)
 
 

@@ -126,7 +126,8 @@ def _table(data: bytes, wanted: Sequence[Column], faults: Faults, named: Sequenc
     if not body.strip(b"\n \t,;\""):
         faults.add("the table has no rows; give one row for each mark")
         return None
-    cells, line = _fast(body, delimiter, len(header), columns) or _careful(body, delimiter, len(header), columns, above, faults)
+    cells, line = (_fast(body, delimiter, len(header), columns)
+                   or _careful(body, delimiter, len(header), columns, wanted, above, faults))
     line = line + above  # the body begins below these
     cells = {name: pc.utf8_trim_whitespace(column) for name, column in cells.items()}
     filled = np.zeros(len(line), bool)
@@ -195,11 +196,12 @@ def _fast(body: bytes, delimiter: str, width: int, place: dict[str, int]) -> tup
     return {name: table[names[i]].combine_chunks() for name, i in place.items()}, np.arange(1, lines + 1)
 
 
-def _careful(body: bytes, delimiter: str, width: int, place: dict[str, int], above: int,
-             faults: Faults) -> tuple[Cells, NDArray[np.int64]]:
+def _careful(body: bytes, delimiter: str, width: int, place: dict[str, int], wanted: Sequence[Column],
+             above: int, faults: Faults) -> tuple[Cells, NDArray[np.int64]]:
     """The same row by row, where rows are short or long or cells hold line ends."""
     rows, line, odd = [], [], []
-    least = max(place.values()) + 1
+    least = max([place[column.name] + 1 for column in wanted if column.required], default=1)
+    numbers = [place[column.name] for column in wanted if column.number and column.name in place]
     reader = csv.reader(io.StringIO(body.decode(), newline=""), delimiter=delimiter)
     at = 0
     try:
@@ -207,14 +209,15 @@ def _careful(body: bytes, delimiter: str, width: int, place: dict[str, int], abo
             began, at = at + 1, reader.line_num
             if not any(cell.strip() for cell in row):
                 continue
-            while len(row) > width and not row[-1].strip():
-                row.pop()
+            if len(row) > width and (delimiter != "," or not numbers or any("." in row[i] for i in numbers)):
+                while len(row) > width and not row[-1].strip():  # not where decimal commas may have split the cells
+                    row.pop()
             if len(row) < least or len(row) > width:
                 hint = "; a decimal comma needs semicolons between cells" if delimiter == "," and len(row) > width else ""
                 odd.append((began + above, f"the row has {len(row)} {'cell' if len(row) == 1 else 'cells'}, the header "
                             f"{width}; give one cell for each column{hint}"))
                 continue
-            rows.append([row[i] for i in place.values()])
+            rows.append([row[i] if i < len(row) else "" for i in place.values()])
             line.append(began)
     except csv.Error as error:
         odd.append((reader.line_num + above, f"the row cannot be read ({error}); mend its quotes"))
