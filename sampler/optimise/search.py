@@ -22,6 +22,7 @@ from sampler.optimise.certificate import bound_certificate, counting_certificate
 from sampler.optimise.counting import counting_bound, rules_admit
 from sampler.optimise.exchange import fewest, most_informative
 from sampler.optimise.log_det import log_det, log_det_bound
+from sampler.optimise.pool import cost_step
 from sampler.optimise.problem import SearchResult, SiteProblem
 from sampler.optimise.relaxation import FEASIBLE, Relaxation, relax
 from sampler.optimise.tree import decide
@@ -147,16 +148,14 @@ def _close(standing: _Standing, parts: Split, relaxed: Relaxation, step: float |
                               upper=None if standing.chosen is None else standing.cost, lower=least,
                               rng=rng.spawn(1)[0], deadline=min(until, time.monotonic() + turn), stop=stop,
                               on_found=standing.offer))
-        if step is None:
-            turn *= TURN_GROWTH
-        elif least < standing.cost * (1.0 - ROUNDING):
-            decision = decide(parts, problem, least, rows=relaxed.rows, weights=relaxed.weights, stop=stop,
-                              seconds=max(0.0, min(until - time.monotonic(), turn)))
+        left = min(turn, until - time.monotonic())
+        if step is not None and least < standing.cost * (1.0 - ROUNDING) and left > 0.0:
+            decision = decide(parts, problem, least, rows=relaxed.rows, weights=relaxed.weights, stop=stop, seconds=left)
             standing.offer(decision.chosen)
             if decision.status == "impossible":
                 standing.prove(least + step, decision.certificate)
-            else:
-                turn *= TURN_GROWTH
+                continue
+        turn *= TURN_GROWTH
 
 
 def _linear_certificate(problem: SiteProblem, relaxed: Relaxation) -> dict[str, Any]:
@@ -180,13 +179,6 @@ def most_cost(problem: SiteProblem) -> float:
     """What the dearest set within max_sites costs; a bound above it says that no set will do."""
     allowed = np.sort(problem.cost[~problem.forbidden])[::-1]
     return float(allowed[:problem.max_sites].sum()) * (1.0 + ROUNDING)
-
-
-def cost_step(cost: NDArray[np.float64]) -> float | None:
-    """The number of which every set's cost is a whole multiple, when costs are whole numbers; else None."""
-    if len(cost) and np.all(cost == np.rint(cost)) and cost.max() < 2**31:
-        return float(np.gcd.reduce(cost.astype(np.int64)))
-    return None
 
 
 def rounded_up(bound: float, step: float | None) -> float:

@@ -21,7 +21,7 @@ from random_problems import (
 from sampler.optimise.blocks import split
 from sampler.optimise.counting import counting_bound, rules_admit
 from sampler.optimise.problem import CountRules, site_problem
-from sampler.optimise.search import cost_step, meets, rounded_up, search
+from sampler.optimise.search import meets, rounded_up, search
 from sampler.tasks.proof_check import check_proof
 
 
@@ -227,9 +227,7 @@ def test_costs_that_are_not_whole_numbers(rng):
     assert result.status == ("proven" if result.lower_bound > cost * (1 - 1e-6) else "interval")
 
 
-def test_steps_of_cost():
-    assert cost_step(np.array([2.0, 4.0, 6.0])) == 2.0
-    assert cost_step(np.array([1.0, 1.5])) is None
+def test_bounds_round_up_to_a_cost_that_a_set_can_have():
     assert rounded_up(4.1, 2.0) == 6.0
     assert rounded_up(4.0 + 1e-9, 2.0) == 4.0
     assert rounded_up(4.1, None) == 4.1
