@@ -20,7 +20,8 @@ from numpy.typing import NDArray
 from sampler.optimise.blocks import Split, split
 from sampler.optimise.certificate import bound_certificate, counting_certificate
 from sampler.optimise.counting import counting_bound, rules_admit
-from sampler.optimise.exchange import fewest, most_informative
+from sampler.optimise.exchange import fewest
+from sampler.optimise.informative import most_informative
 from sampler.optimise.log_det import log_det, log_det_bound
 from sampler.optimise.pool import cost_step
 from sampler.optimise.problem import SearchResult, SiteProblem
@@ -131,7 +132,7 @@ def _search(problem: SiteProblem, began: float, until: float, rng: np.random.Gen
     polished = min(until, now + max(LEAST_POLISH, POLISH_SHARE * (now - began)))
     standing.chosen = np.sort(most_informative(parts, problem, standing.chosen, rng=rng.spawn(1)[0], deadline=polished,
                                                stop=stop))
-    reach = log_det_bound(parts, problem, len(standing.chosen), rows=relaxed.rows, deadline=until)
+    reach = log_det_bound(parts, problem, standing.cost, rows=relaxed.rows, deadline=until)
     return standing.result("proven" if proven else "interval", log_det=log_det(parts, problem, standing.chosen),
                            log_det_bound=reach.value, interrupted=not proven and ended())
 
