@@ -21,7 +21,7 @@ from random_problems import (
 from sampler.optimise.blocks import split
 from sampler.optimise.counting import counting_bound, rules_admit
 from sampler.optimise.problem import CountRules, site_problem
-from sampler.optimise.search import meets, rounded_up, search
+from sampler.optimise.search import heaviest, meets, rounded_up, search
 from sampler.tasks.proof_check import check_proof
 
 
@@ -231,6 +231,17 @@ def test_bounds_round_up_to_a_cost_that_a_set_can_have():
     assert rounded_up(4.1, 2.0) == 6.0
     assert rounded_up(4.0 + 1e-9, 2.0) == 4.0
     assert rounded_up(4.1, None) == 4.1
+
+
+@pytest.mark.parametrize("seed", [1, 3, 16, 26, 40])
+def test_the_heaviest_sites_are_as_few_as_will_do(seed, rng):
+    problem = random_problem(seed)
+    weights = rng.permutation(problem.n) * np.where(problem.forbidden, 0.0, 1.0)
+    found = heaviest(split(problem), problem, weights)
+    assert variance_ratios(problem, found).max() <= 1 + 1e-8
+    assert np.all(np.isin(np.flatnonzero(problem.required), found))
+    light = min((site for site in found if not problem.required[site]), key=lambda site: weights[site])
+    assert variance_ratios(problem, found[found != light]).max() > 1
 
 
 def test_meets_sees_every_rule():
