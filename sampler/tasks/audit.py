@@ -10,10 +10,11 @@ import numpy as np
 from numpy.typing import NDArray
 
 from sampler.errors import InputError
-from sampler.tasks.plan import MEETS, plan
-from sampler.tasks.question import Question, achieved, knowledge_of, limits_achieved, question
+from sampler.tasks.plan import MEETS, plan, with_floors
+from sampler.tasks.question import Question, achieved, everything, knowledge_of, limits_achieved, question
 from sampler.tasks.results import SiteAudit
 from sampler.tasks.study import Study
+from sampler.tasks.units import Visits
 from sampler.uncertainty.information import information
 
 START_RIDGE = 1e-6
@@ -32,7 +33,7 @@ def audit(study: Study, ids: Sequence[str], *, search_fewest: bool = True,
     """
     asked = question(study)
     rows = _rows(asked, ids)
-    found = achieved(asked, rows)
+    found = with_floors(achieved(asked, _visits(asked, rows)), achieved(asked, everything(asked)))
     fewest = plan(study, progress=progress, stop=stop, asked=asked) if search_fewest else None
     met = all(limit.ratio <= MEETS for limit in found.limits)
     droppable = tuple(str(asked.candidates.sites.id[row]) for row in rows if met and _meets_without(asked, rows, row))
@@ -43,6 +44,11 @@ def audit(study: Study, ids: Sequence[str], *, search_fewest: bool = True,
         efficiency = math.exp(per_site)
     return SiteAudit(study, asked.candidates, found, droppable, None if met else _best_to_add(asked, rows), fewest,
                      efficiency, study.warnings)
+
+
+def _visits(asked: Question, rows: NDArray[np.int64]) -> Visits:
+    """The listed marks read one by one, in the order given; no error of a stop is shared then."""
+    return Visits(rows, np.arange(len(rows)), rows)
 
 
 def _rows(asked: Question, ids: Sequence[str]) -> NDArray[np.int64]:
@@ -67,7 +73,7 @@ def _rows(asked: Question, ids: Sequence[str]) -> NDArray[np.int64]:
 
 def _meets_without(asked: Question, rows: NDArray[np.int64], row: int) -> bool:
     """Whether the limits hold without one site: the rows first, the regions' worst places only when these hold."""
-    knowledge = knowledge_of(asked, rows[rows != row])
+    knowledge = knowledge_of(asked, _visits(asked, rows[rows != row]))
     if np.any(knowledge.variance(asked.limits.directions) > asked.limits.tau**2 * MEETS**2):
         return False
     return all(limit.ratio <= MEETS for limit in limits_achieved(asked, knowledge))
@@ -78,7 +84,7 @@ def _best_to_add(asked: Question, rows: NDArray[np.int64]) -> tuple[str, float] 
 
     After adding site i, v_l becomes v_l − g_lᵀ (I + Bᵢ M⁻¹ Bᵢᵀ)⁻¹ g_l with g_l = Bᵢ M⁻¹ c_l, for all i and l at once.
     """
-    free = np.setdiff1d(np.flatnonzero(~np.isin(asked.candidates.sites.id, asked.study.rules.forbidden)), rows)
+    free = np.setdiff1d(np.arange(len(asked.candidates.sites)), rows)
     if not len(free):
         return None
     total = information(asked.whitened)
@@ -96,7 +102,7 @@ def _best_to_add(asked: Question, rows: NDArray[np.int64]) -> tuple[str, float] 
         response = blocks @ g
         worst[start:start + step] = (variance - np.einsum("ial,iab,ibl->il", response, gain, response)).max(axis=1)
     order = np.argsort(worst, kind="stable")[:5]
-    ratio = [max(limit.ratio for limit in limits_achieved(asked, knowledge_of(asked, np.append(rows, free[i]))))
+    ratio = [max(limit.ratio for limit in limits_achieved(asked, knowledge_of(asked, _visits(asked, np.append(rows, free[i])))))
              for i in order]
     best = int(np.argmin(ratio))
     return str(asked.candidates.sites.id[free[order[best]]]), float(ratio[best])

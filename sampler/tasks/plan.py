@@ -5,30 +5,38 @@ from __future__ import annotations
 import math
 import time
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
-from sampler.optimise.problem import SearchResult
+from sampler.optimise.problem import SearchResult, SiteProblem
 from sampler.optimise.search import search
 from sampler.panel.region import RegionPoints
+from sampler.route.bound import site_seconds_lower
+from sampler.route.machine import to_machine_frame
+from sampler.route.visit import Route, far_side, plan_route
 from sampler.tasks.advise import advise
+from sampler.tasks.prove import stated
 from sampler.tasks.question import (
     Question,
     achieved,
+    everything,
     knowledge_of,
-    limits_achieved,
     problem_of,
     question,
     region_rows,
     worst_of,
 )
-from sampler.tasks.results import Plan
+from sampler.tasks.results import Audit, Plan
 from sampler.tasks.study import RegionLimit, Study
+from sampler.tasks.units import Visits
+from sampler.uncertainty.information import Knowledge
 from sampler.uncertainty.limits import Limits, stack
 
 Progress = Callable[[float, float], None]
+Indices = NDArray[np.int64]
 
 MEETS = 1.0 + 1e-9
 """A ratio to the limit up to this meets it: rounding of the variances, far below any digit shown."""
@@ -36,6 +44,11 @@ FIRST_SHARE = 0.2
 """Share of the time left that a search may take while the rows of region limits still grow."""
 ROUNDS = 12
 """Rounds of adding the worst places between raster points; two or three are usual."""
+SAME_SECONDS = 0.005
+"""Seconds that differ by less are written alike."""
+REPAIR_SECONDS = 0.5
+TIGHTER = 0.999
+"""Asked of the next search beyond the ratio by which marks shared between stops made the last one miss."""
 
 
 def plan(study: Study, *, progress: Progress | None = None, stop: Callable[[], bool] | None = None,
@@ -43,107 +56,197 @@ def plan(study: Study, *, progress: Progress | None = None, stop: Callable[[], b
     """The fewest candidate sites that meet every limit of the study, proven or with an honest bound.
 
     `progress(bound, best)` is called as they improve; `stop()` true ends the search with the best so far. Not reaching
-    a limit is a result (`status` "cannot"); InputError is for a study whose terms the candidates cannot tell apart.
-    `asked` may be the question already built from the study.
+    a limit is a result (`status` "cannot"); InputError is for a study whose terms the candidates cannot tell apart, or
+    whose rules contradict each other. `asked` may be the question already built from the study.
     """
     began = time.monotonic()
     asked = question(study) if asked is None else asked
-    allowed = ~np.isin(asked.candidates.sites.id, study.rules.forbidden)
-    everything = limits_achieved(asked, knowledge_of(asked, allowed))
-    if any(limit.ratio > MEETS for limit in everything):
-        audit = achieved(asked, np.flatnonzero(allowed))
-        return Plan(study, asked.candidates, audit, "cannot", math.nan, {}, math.nan, advise(asked, audit),
+    best_possible = achieved(asked, everything(asked))
+    if not _meets(best_possible):
+        return Plan(study, asked.candidates, best_possible, "cannot", math.nan, {}, math.nan, advise(asked, best_possible),
                     study.warnings, time.monotonic() - began)
-    found = _search(asked, began + study.search.seconds, progress, stop)
-    if found.rows is None:
-        return _nothing_found(asked, found, np.flatnonzero(allowed), began)
-    audit = achieved(asked, visiting(asked, found.rows))
-    count = len(found.rows)
+    searched = _Search(asked, began + study.search.seconds, progress, stop)
+    found = searched.run()
+    if found.units is None:
+        return _nothing_found(asked, found, best_possible, began)
+    return _plan(asked, found, best_possible, began)
+
+
+def _meets(audit: Audit) -> bool:
+    return all(limit.ratio <= MEETS for limit in audit.limits)
+
+
+def _plan(asked: Question, found: Found, best_possible: Audit, began: float) -> Plan:
+    study, units = asked.study, found.units
+    assert units is not None
+    visits, route = routed(asked, units)
+    audit = with_floors(achieved(asked, visits), best_possible)
     efficiency = math.exp(min(0.0, (audit.log_det - found.log_det_bound) / len(study.model)))
-    return Plan(study, asked.candidates, audit, "proven" if math.ceil(found.bound - 1e-6) >= count else "interval",
-                found.bound, found.certificate, efficiency, (), study.warnings, time.monotonic() - began,
-                found.interrupted)
+    seconds_at_least = math.nan
+    proven = found.proven
+    if study.search.objective == "seconds":
+        seconds_at_least = found.bound
+        proven = route.seconds - seconds_at_least < SAME_SECONDS
+    grouped = asked.units.stops is not None
+    return Plan(study, asked.candidates, audit, "proven" if proven else "interval", found.count_bound, found.certificate,
+                efficiency, (), study.warnings, time.monotonic() - began, found.interrupted, route,
+                visits.stop + 1 if grouped else None, asked.units.xy_mm[visits.unit] if grouped else None,
+                seconds_at_least)
 
 
 @dataclass(frozen=True, slots=True)
 class Found:
-    """`rows`: the best set that an audit has confirmed, or None; `bound` on the count of any set that meets the limits."""
+    """`units`: the best set that an audit has confirmed, or None. `bound` is on the search's objective, in sites, stops or
+    seconds; `reason` what the search said when it found no set."""
 
-    rows: NDArray[np.int64] | None
+    units: Indices | None
     bound: float
+    count_bound: float
+    proven: bool
     log_det_bound: float
-    certificate: dict
-    status: str
+    certificate: dict[str, Any]
+    reason: str
     interrupted: bool
 
 
-def _search(asked: Question, until: float, progress: Progress | None, stop: Callable[[], bool] | None) -> Found:
-    """Searches, audits between the raster points, adds the worst places as rows, and searches on.
+class _Search:
+    """Searches, audits, and searches on where the audit shows what the search's rows did not.
 
-    A region's raster only relaxes its limit, so every bound holds for the limit itself; a set counts as found only when
-    its audit meets the limit everywhere.
+    A region's raster only relaxes its limit, and a mark in two chosen stops counts twice in the search but once in the
+    audit; so every bound holds for the limits themselves, and a set counts as found only when its audit meets them.
     """
-    seed = asked.study.search.seed
-    limits, grown, best = asked.limits, not asked.rasters, Found(None, 0.0, math.nan, {}, "", False)
-    result: SearchResult | None = None
-    for turn in range(ROUNDS):
-        left = max(0.0, until - time.monotonic())
-        share = left if grown or turn == ROUNDS - 1 else FIRST_SHARE * left
-        result = search(problem_of(asked, limits), seconds=share, seed=seed, progress=progress, stop=stop, warm=result)
-        more = None if result.chosen is None else _between(asked, result.chosen)
-        bound, certificate = (result.lower_bound, result.certificate) if result.lower_bound >= best.bound else \
-            (best.bound, best.certificate)
-        if result.chosen is not None and more is None and (best.rows is None or len(result.chosen) <= len(best.rows)):
-            best = Found(result.chosen, bound, result.log_det_bound, certificate, result.status, result.interrupted)
-        else:
-            best = Found(best.rows, bound, best.log_det_bound, certificate, result.status, result.interrupted)
-        over = result.interrupted or time.monotonic() >= until or result.chosen is None
+
+    def __init__(self, asked: Question, until: float, progress: Progress | None, stop: Callable[[], bool] | None):
+        self.asked, self.until, self.progress, self.stop = asked, until, progress, stop
+        self.limits, self.tighten = asked.limits, 1.0
+        self.bound = -math.inf
+        self.certificate: dict[str, Any] = {}
+        self.best: SearchResult | None = None
+        self.cost, self.constant = _costs(asked)
+
+    def run(self) -> Found:
+        result: SearchResult | None = None
+        growing = bool(self.asked.rasters)
+        for turn in range(ROUNDS):
+            left = max(0.0, self.until - time.monotonic())
+            share = FIRST_SHARE * left if growing and turn < ROUNDS - 1 else left
+            result = search(self._problem(), seconds=share, seed=self.asked.study.search.seed, progress=self.progress,
+                            stop=self.stop, warm=result)
+            self._note_bound(result)
+            if result.chosen is None:
+                break
+            missed = self._missed(result.chosen)
+            if not missed:
+                self._note_found(result)
+                if not growing or result.status == "proven":
+                    break
+                growing = False
+            if result.interrupted or time.monotonic() >= self.until:
+                if self.best is None and missed:
+                    self._repair(result)
+                break
+        assert result is not None
+        return self._found(result)
+
+    def _problem(self) -> SiteProblem:
+        problem = problem_of(self.asked, self.limits, self.tighten)
+        return problem if self.cost is None else replace(problem, cost=self.cost)
+
+    def _note_bound(self, result: SearchResult) -> None:
+        """A bound of the untightened problem is one for the study."""
+        if self.tighten == 1.0 and result.lower_bound > self.bound:
+            self.bound = result.lower_bound
+            self.certificate = stated(result.certificate, self.asked.study, self.limits) if result.certificate else {}
+
+    def _note_found(self, result: SearchResult) -> None:
+        assert result.chosen is not None
+        if self.best is None or self._objective(result) < self._objective(self.best) or (
+                self._objective(result) == self._objective(self.best) and result.log_det >= self.best.log_det):
+            self.best = result
+
+    def _objective(self, result: SearchResult) -> float:
+        assert result.chosen is not None
+        return float(len(result.chosen) if self.cost is None else self.cost[result.chosen].sum())
+
+    def _missed(self, chosen: Indices) -> bool:
+        """Whether the audit of a set misses a limit; then the rows, or the tightness, grow so that the next one will not."""
+        knowledge = knowledge_of(self.asked, self.asked.units.visits(chosen))
+        more = self._between(knowledge)
         if more is not None:
-            limits = stack([limits, more])
-        elif grown or result.status == "proven":
-            break
-        grown = more is None
-        if over and (best.rows is not None or result.chosen is None):
-            break
-    return best
+            self.limits = stack([self.limits, more])
+        worst = float(np.max(knowledge.variance(self.asked.limits.directions) / self.asked.limits.tau**2))
+        if worst > MEETS**2:
+            self.tighten *= TIGHTER / math.sqrt(worst)
+        return more is not None or worst > MEETS**2
+
+    def _between(self, knowledge: Knowledge) -> Limits | None:
+        """Rows for the worst places of the region limits that are missed between raster points, or None."""
+        asked, rows = self.asked, []
+        for source, limit in enumerate(asked.study.limits):
+            if not isinstance(limit, RegionLimit):
+                continue
+            worst = worst_of(asked, knowledge, source)
+            if asked.study.coverage_factor * worst.u_um > limit.position_um * MEETS:
+                rows.append(region_rows(asked.study, asked.assumed, source, RegionPoints(
+                    np.array([worst.xy_mm]), {name: np.array([cell]) for name, cell in worst.cell.items()})))
+        return stack(rows) if rows else None
+
+    def _repair(self, result: SearchResult) -> None:
+        """Time is over and the only set misses a limit by a hair: ask once more, shortly, for a little more than the limits."""
+        for _ in range(ROUNDS):
+            result = search(self._problem(), seconds=REPAIR_SECONDS, seed=self.asked.study.search.seed, warm=result)
+            if result.chosen is None:
+                return
+            if not self._missed(result.chosen):
+                self._note_found(replace(result, interrupted=True))
+                return
+
+    def _found(self, last: SearchResult) -> Found:
+        best, bound = self.best, self.bound + self.constant
+        if best is None:
+            return Found(None, bound, bound if self.cost is None else math.nan, False, math.nan, self.certificate,
+                         last.status, last.interrupted)
+        proven = self.cost is None and math.ceil(self.bound - 1e-6) >= self._objective(best)
+        return Found(best.chosen, bound, bound if self.cost is None else math.nan, proven, best.log_det_bound,
+                     self.certificate, best.status, last.interrupted)
 
 
-def _between(asked: Question, chosen: NDArray[np.int64]) -> Limits | None:
-    """Rows for the worst places of the region limits that the chosen sites miss between raster points, or None."""
-    knowledge = knowledge_of(asked, chosen)
-    rows = []
-    for source, limit in enumerate(asked.study.limits):
-        if not isinstance(limit, RegionLimit):
-            continue
-        worst = worst_of(asked, knowledge, source)
-        if asked.study.coverage_factor * worst.u_um > limit.position_um * MEETS:
-            rows.append(region_rows(asked.study, asked.assumed, source, RegionPoints(
-                np.array([worst.xy_mm]), {name: np.array([cell]) for name, cell in worst.cell.items()})))
-    return stack(rows) if rows else None
+def _costs(asked: Question) -> tuple[NDArray[np.float64] | None, float]:
+    """Seconds that each unit costs at least, and what every panel costs; None when the objective is the count."""
+    study = asked.study
+    if study.search.objective != "seconds":
+        return None, 0.0
+    size = (study.layout.width_mm, study.layout.height_mm)
+    far = far_side(len(asked.units), asked.units.side)
+    seconds = site_seconds_lower(to_machine_frame(asked.units.xy_mm, study.machine, size, far), study.machine, far=far,
+                                 read_s=asked.units.read_s, spacing_mm=study.rules.min_spacing_mm or 0.0)
+    return seconds.site_s, seconds.constant_s
 
 
-def visiting(asked: Question, rows: NDArray[np.int64]) -> NDArray[np.int64]:
-    """The chosen candidates in visiting order."""
-    from sampler.route.machine import Machine
-    from sampler.route.tour import visiting_order
+def routed(asked: Question, units: Indices) -> tuple[Visits, Route]:
+    """The chosen units in visiting order, as readings, and the route over them."""
+    study = asked.study
+    route = plan_route(asked.units.xy_mm[units], study.machine, (study.layout.width_mm, study.layout.height_mm),
+                       side=asked.units.side[units], read_s=asked.units.read_s[units], key=asked.units.key[units],
+                       seed=study.search.seed)
+    return asked.units.visits(units[route.order]), route
 
-    sites = asked.candidates.sites.take(rows)
-    return rows[visiting_order(sites.xy_mm, Machine(), seed=asked.study.search.seed, key=sites.id)]
+
+def with_floors(audit: Audit, best_possible: Audit) -> Audit:
+    """The audit with each limit's floor: what it is with every candidate measured."""
+    return replace(audit, limits=tuple(replace(limit, floor=floor.predicted)
+                                       for limit, floor in zip(audit.limits, best_possible.limits, strict=True)))
 
 
-def _nothing_found(asked: Question, found: Found, allowed: NDArray[np.int64], began: float) -> Plan:
+def _nothing_found(asked: Question, found: Found, best_possible: Audit, began: float) -> Plan:
     """All candidates together meet the limits, but no set within the rules was found."""
     study, rules = asked.study, asked.study.rules
-    audit = achieved(asked, allowed)
-    bound = math.ceil(found.bound - 1e-6)
-    if rules.max_sites is not None and bound > rules.max_sites:
-        advice = (f"the limits need at least {bound} sites, and max_sites allows {rules.max_sites}: raise it, or loosen "
-                  "the limits",)
+    noun = "sites" if asked.units.stops is None else "stops"
+    if rules.max_sites is not None and found.count_bound > rules.max_sites + 1e-6:
+        advice = (f"the limits need at least {math.ceil(found.count_bound - 1e-6)} {noun}, and max_sites allows "
+                  f"{rules.max_sites}: raise it, or loosen the limits",)
     else:
-        advice = (f"the search ended without a set that meets every limit (at least {bound} sites are needed): give it "
-                  "more [search] seconds",)
-    return Plan(study, asked.candidates, audit, "cannot", found.bound, found.certificate, math.nan, advice,
+        advice = ("the search ended without a set that meets every limit and rule: give it more [search] seconds, or relax "
+                  "the rules",)
+    return Plan(study, asked.candidates, best_possible, "cannot", found.count_bound, found.certificate, math.nan, advice,
                 study.warnings, time.monotonic() - began, found.interrupted)
-
-
-

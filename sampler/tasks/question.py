@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
@@ -12,9 +12,12 @@ from sampler.model.basis import places
 from sampler.optimise.problem import SiteProblem, site_problem
 from sampler.panel.candidates import Candidates, candidates
 from sampler.panel.region import RegionPoints, inside_region
+from sampler.route.machine import SIDES
 from sampler.tasks.results import Audit, AuditedLimit, AuditedTerm, PositionMap
+from sampler.tasks.rules import UnitRules, barred, check_rules, not_on_side, unit_rules
 from sampler.tasks.study import RegionLimit, Study, TermLimit
-from sampler.uncertainty.assumed import NO_TERMS, Assumed
+from sampler.tasks.units import Units, Visits, units_of
+from sampler.uncertainty.assumed import NO_TERMS, Assumed, SharedErrors
 from sampler.uncertainty.field import local_field
 from sampler.uncertainty.information import Knowledge, information, whiten
 from sampler.uncertainty.limits import Limits, stack
@@ -32,14 +35,19 @@ SMALLEST_SHARE = 1e-3
 
 @dataclass(frozen=True, slots=True)
 class Question:
-    """`assumed`: the corrected terms and what may be there beside them, p of them in all. `whitened` (n, 2, p): the
-    candidates' readings. `limits`: the rows that the search holds; a region's rows are a
-    raster, and `rasters` holds the finer one on which its worst place is sought (by region and polygon position)."""
+    """`assumed`: the corrected terms and what may be there beside them, p of them in all.
+
+    `whitened` (n, 2, p): the candidates' readings. `units`: what the search chooses, marks or stops. `limits`: the rows that
+    the search holds; a region's rows are a raster, and `rasters` holds the finer one on which its worst place is sought,
+    by the position of the limit in the study.
+    """
 
     study: Study
     assumed: Assumed
     candidates: Candidates
     whitened: Array
+    units: Units
+    rules: UnitRules
     limits: Limits
     rasters: dict[int, RegionPoints]
     panel_raster: RegionPoints
@@ -51,21 +59,44 @@ class Question:
 
 def question(study: Study) -> Question:
     """Candidates, readings and limit rows of a study. Raises InputError when its terms cannot be told apart."""
-    found = candidates(study.layout)
+    found = _measurable(study)
     sites = found.sites
     if not len(sites):
         raise InputError(f"{study.layout_source.path or study.layout.name}: no mark may be measured "
                          f"({'; '.join(f'{n} {why}' for why, n in found.counts().items()) or 'the layout has none'}); "
                          "add marks, or shrink keep-outs or the edge exclusion")
     assumed = assumed_of(study)
-    whitened = whiten(assumed.blocks(places(study.layout, sites.xy_mm)), assumed.sigma_um(study.noise, sites))
+    sigma = assumed.sigma_um(study.noise, sites)
+    if study.measure.field_of_view_mm is None:
+        sigma = np.hypot(sigma, study.measure.stop_um)
+    sites = replace(sites, sigma_um=sigma)
+    whitened = whiten(assumed.readings(places(study.layout, sites.xy_mm), sites.side), sigma)
     groups = inseparable(information(whitened, assumed.prior_precision))
     if groups:
         where = study.source.path or study.title
         raise InputError([f"{where}: [model] {sentence}" for sentence in in_words(groups, study.model.names)])
     rasters = {source: raster(study.layout, limit.region, limit.polygon_mm)
                for source, limit in enumerate(study.limits) if isinstance(limit, RegionLimit)}
-    return Question(study, assumed, found, whitened, limit_rows(study, assumed), rasters, raster(study.layout, "panel"))
+    units = units_of(sites, study.measure.field_of_view_mm, study.measure.stop_um)
+    rules = unit_rules(study, units)
+    check_rules(study, units, rules)
+    return Question(study, assumed, replace(found, sites=sites), whitened, units, rules, limit_rows(study, assumed), rasters,
+                    raster(study.layout, "panel"))
+
+
+def _measurable(study: Study) -> Candidates:
+    """The candidates that side and rules leave, each with its read rate, and why the other marks are left out."""
+    found = candidates(study.layout)
+    marks = study.layout.marks
+    reason = found.reason.astype("U80")
+    for why in (not_on_side(study.layout, study.measure.side),
+                np.where(barred(study.rules, marks), "forbidden by [rules]", "")):
+        reason = np.where(reason == "", why, reason)
+    sites = marks.take(np.flatnonzero(reason == ""))
+    rate = sites.read_rate.copy()
+    for kind, given in study.measure.read_rate:
+        rate[(sites.kind == kind) & (rate == 1.0)] = given
+    return Candidates(replace(sites, read_rate=rate), reason)
 
 
 def assumed_of(study: Study) -> Assumed:
@@ -76,9 +107,22 @@ def assumed_of(study: Study) -> Assumed:
     field = None
     if study.noise.local_range_mm and max(study.noise.local_um) > 0:
         field = local_field(study.layout.width_mm, study.layout.height_mm, study.noise.local_range_mm, study.noise.local_um)
-    if study.potential is None:
-        return Assumed(study.model, sd, NO_TERMS, None, field)
-    return Assumed(study.model, sd, study.potential.terms, np.full(len(study.potential.terms), study.potential.sd_um), field)
+    potential, deviation = NO_TERMS, None
+    if study.potential is not None:
+        potential, deviation = study.potential.terms, np.full(len(study.potential.terms), study.potential.sd_um)
+    return Assumed(study.model, sd, potential, deviation, field, _shared(study))
+
+
+def _shared(study: Study) -> SharedErrors:
+    """Errors common to all marks of one side, and to all read after turning over; only on sides that are measured."""
+    measure, marks = study.measure, study.layout.marks
+    sides = [side for side in SIDES if measure.side in ("both", side) and np.any(marks.side == side)]
+    found: list[tuple[tuple[str, ...], tuple[float, float]]] = [((side,), measure.side_um)
+                                                               for side in sides if max(measure.side_um) > 0]
+    second = [side for side in sides if side != study.machine.first_side]
+    if second and len(sides) > 1 and max(measure.flip_um) > 0:
+        found.append((tuple(second), measure.flip_um))
+    return SharedErrors(tuple(on for on, _ in found), tuple(sd for _, sd in found))
 
 
 def limit_rows(study: Study, assumed: Assumed) -> Limits:
@@ -122,13 +166,18 @@ def region_label(limit: RegionLimit) -> str:
     return said if limit.of == "correction" else said.replace("position", "displacement")
 
 
-def problem_of(asked: Question, limits: Limits | None = None) -> SiteProblem:
-    """The question as the optimiser sees it; `limits` replaces the raster's rows when more have been added."""
+def problem_of(asked: Question, limits: Limits | None = None, tighten: float = 1.0) -> SiteProblem:
+    """The question as the optimiser sees it, in units.
+
+    `limits` replaces the raster's rows when more have been added; `tighten` < 1 asks for more than the limits. A mark that
+    reads with probability q counts with its expected information, √q times its rows.
+    """
     limits = asked.limits if limits is None else limits
-    rules, ids = asked.study.rules, asked.candidates.sites.id
-    return site_problem(asked.whitened, limits.directions, limits.tau, prior_precision=asked.assumed.prior_precision,
-                        required=np.isin(ids, rules.required), forbidden=np.isin(ids, rules.forbidden), key=ids,
-                        interest=asked.assumed.interest, max_sites=rules.max_sites)
+    rules, rate = asked.study.rules, asked.candidates.sites.read_rate
+    whitened = asked.whitened if np.all(rate == 1.0) else asked.whitened * np.sqrt(rate)[:, None, None]
+    return site_problem(asked.units.rows(whitened), limits.directions, limits.tau * tighten,
+                        prior_precision=asked.assumed.prior_precision, required=asked.rules.required, key=asked.units.key,
+                        interest=asked.assumed.interest, rules=asked.rules.counts, max_sites=rules.max_sites)
 
 
 def worst_of(asked: Question, knowledge: Knowledge, source: int) -> WorstPlace:
@@ -155,28 +204,33 @@ def limits_achieved(asked: Question, knowledge: Knowledge) -> tuple[AuditedLimit
     return tuple(audited)
 
 
-def knowledge_of(asked: Question, rows: NDArray) -> Knowledge:
-    """What the given candidates (indices or mask) tell."""
-    return Knowledge.of(information(asked.whitened[rows], asked.assumed.prior_precision))
+def knowledge_of(asked: Question, visits: Visits) -> Knowledge:
+    """What the visited marks tell when all of them read."""
+    return Knowledge.of(information(asked.units.readings(visits, asked.whitened), asked.assumed.prior_precision))
 
 
-def achieved(asked: Question, rows: NDArray[np.int64]) -> Audit:
-    """The audit of a set of candidates, listed in the order given."""
+def everything(asked: Question) -> Visits:
+    """Every mark that may be measured, each in a stop of its own or in as many stops as it takes."""
+    return asked.units.visits(np.arange(len(asked.units)))
+
+
+def achieved(asked: Question, visits: Visits) -> Audit:
+    """The audit of visits, its sites listed in their order."""
     study, factor = asked.study, asked.study.coverage_factor
-    knowledge = knowledge_of(asked, rows)
+    knowledge = knowledge_of(asked, visits)
     limits = limits_achieved(asked, knowledge)
     held: dict[str, float] = {}
     for limit in study.limits:
         if isinstance(limit, TermLimit):
             held |= {name: min(limit.maximum, held.get(name, np.inf)) for name in limit.terms}
     u = factor * np.sqrt(knowledge.variance(np.eye(asked.assumed.size)[:asked.assumed.corrected]))
-    bias = asked.assumed.bias(asked.whitened[rows])
+    bias = asked.assumed.bias(asked.units.readings(visits, asked.whitened))
     terms = tuple(AuditedTerm(name, unit, float(value), held.get(name, np.nan), float(shift))
                   for name, unit, value, shift in zip(study.model.names, study.model.units, u, bias, strict=True))
     worst = worst_place(asked.assumed, study.layout, knowledge, "panel", None, asked.panel_raster)
     worst_position = AuditedLimit("position over the panel", np.nan, factor * worst.u_um, "µm", worst.xy_mm,
                                   ("dx", "dy")[worst.axis])
-    return Audit(asked.candidates.sites.take(rows), limits, terms, knowledge.log_det(asked.assumed.interest),
+    return Audit(asked.candidates.sites.take(visits.marks), limits, terms, knowledge.log_det(asked.assumed.interest),
                  _position_map(asked, knowledge), worst_position)
 
 

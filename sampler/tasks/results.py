@@ -11,6 +11,7 @@ from numpy.typing import NDArray
 
 from sampler.panel.candidates import Candidates
 from sampler.panel.layout import Sites
+from sampler.route.visit import Route
 from sampler.tasks.study import Study
 
 # A bound this little above a whole number does not exclude it: solvers and the sum of many rows round.
@@ -91,11 +92,26 @@ class Audit:
 
 
 @dataclass(frozen=True, slots=True)
+class MissChance:
+    """The chance that a panel misses a limit because marks do not read: it lies between `least` and `most`.
+
+    The patterns of lost marks that were worked out one by one cover all but `most` − `least` of the chance. `panels` > 0: by
+    that many simulated panels instead, and the two are a 95 % interval.
+    """
+
+    least: float
+    most: float
+    panels: int = 0
+
+
+@dataclass(frozen=True, slots=True)
 class Plan:
     """The answer to a study: sites in visiting order with their audit and the proof.
 
     `status` is "proven", "interval" or "cannot" (then the audit is of all candidates, `advice` says what would help and
-    `audit.sites` holds every candidate). `lower_bound` is on the number of sites.
+    `audit.sites` holds every candidate). `lower_bound` is on the number of sites; of stops, when a stop reads several
+    marks: `stop` (n,) is the stop of each site, from 1, and `stop_xy_mm` (stops, 2) where it stands. `route` accounts for
+    the seconds, with `seconds_at_least` when the objective is seconds (NaN otherwise). `chance`: what lost marks do.
     """
 
     study: Study
@@ -109,10 +125,20 @@ class Plan:
     warnings: tuple[str, ...]
     seconds: float
     interrupted: bool = False
+    route: Route | None = None
+    stop: NDArray[np.int64] | None = None
+    stop_xy_mm: NDArray[np.float64] | None = None
+    seconds_at_least: float = math.nan
+    chance: MissChance | None = None
 
     @property
     def sites(self) -> Sites:
         return self.audit.sites
+
+    @property
+    def units(self) -> int:
+        """What the search counted: stops when a stop reads several marks, sites otherwise."""
+        return len(self.sites) if self.stop_xy_mm is None else len(self.stop_xy_mm)
 
     @property
     def fewest_proven(self) -> bool:
@@ -126,8 +152,8 @@ class Plan:
     @property
     def answer(self) -> str:
         """Count and proof in a few words; never "fewest" or "optimal" for more than was proven."""
-        count = len(self.sites)
-        found = f"{count} site" if count == 1 else f"{count} sites"
+        count, noun = self.units, "site" if self.stop_xy_mm is None else "stop"
+        found = f"{count} {noun}" if count == 1 else f"{count} {noun}s"
         if self.status == "cannot":
             return "cannot be met"
         if not self.audit.meets_limits:

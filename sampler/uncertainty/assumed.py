@@ -1,7 +1,7 @@
 """What is assumed of a panel: the corrected terms, and beside them what may be there without being corrected.
 
-All of it is one linear model with a prior: θ = corrected terms | potential terms | local field in dx | local field in dy.
-A term without prior has infinite standard deviation; every prior is a visible row here, there is no other ridge.
+All of it is one linear model with a prior: θ = corrected terms | potential terms | local field in dx | local field in dy |
+errors shared by readings (of one side, or after turning the panel over). A term without prior has infinite standard deviation; every prior is a visible row here, there is no other ridge.
 """
 
 from __future__ import annotations
@@ -22,6 +22,25 @@ NO_TERMS = Model(())
 
 
 @dataclass(frozen=True, slots=True)
+class SharedErrors:
+    """Offsets common to many readings, one of dx and one of dy for each label: `sides[label]` are the sides it is on."""
+
+    sides: tuple[tuple[str, ...], ...]
+    sd_um: tuple[tuple[float, float], ...]
+
+    def columns(self, side: NDArray[np.str_]) -> Array:
+        """Their part in each reading, (n, 2, 2·labels)."""
+        columns = np.zeros((len(side), 2, 2 * len(self.sides)))
+        for number, sides in enumerate(self.sides):
+            on = np.isin(side, sides)
+            columns[on, 0, 2 * number] = columns[on, 1, 2 * number + 1] = 1.0
+        return columns
+
+
+NOT_SHARED = SharedErrors((), ())
+
+
+@dataclass(frozen=True, slots=True)
 class Assumed:
     """`model` is corrected; `sd` (p,) its terms' prior standard deviations in their units, inf for none.
 
@@ -34,6 +53,7 @@ class Assumed:
     potential: Model = NO_TERMS
     potential_sd: Array | None = None
     field: LocalField | None = None
+    shared: SharedErrors = NOT_SHARED
 
     @classmethod
     def plain(cls, model: Model) -> Assumed:
@@ -46,7 +66,7 @@ class Assumed:
 
     @property
     def size(self) -> int:
-        return self.corrected + len(self.potential) + (2 * self.field.rank if self.field else 0)
+        return self.corrected + len(self.potential) + (2 * self.field.rank if self.field else 0) + 2 * len(self.shared.sides)
 
     @property
     def interest(self) -> NDArray[np.bool_]:
@@ -62,29 +82,38 @@ class Assumed:
             sd.append(self.potential_sd)
         if self.field:
             sd.append(np.ones(2 * self.field.rank))
+        sd += [np.array(pair) for pair in self.shared.sd_um]
         return np.diag(1.0 / np.concatenate(sd) ** 2)
 
-    def blocks(self, at: Places) -> Array:
-        """What each point would read per unit of each of θ, (n, 2, size)."""
-        if self.size == self.corrected:
-            return design_blocks(self.model, at)
-        parts = [design_blocks(self.model, at), design_blocks(self.potential, at)]
+    def readings(self, at: Places, side: NDArray[np.str_]) -> Array:
+        """What reading a mark at each point gives per unit of each of θ, (n, 2, size); `side` (n,) of each mark."""
+        parts = self._displacement(at)
+        if self.shared.sides:
+            parts.append(self.shared.columns(side))
+        return parts[0] if len(parts) == 1 else np.concatenate(parts, axis=2)
+
+    def position(self, at: Places, of: str) -> Array:
+        """Directions of a predicted position at points, (n, 2, size).
+
+        `of` "correction": what the corrected terms say; "displacement": all that moves the panel, the field included.
+        Errors shared by readings move nothing.
+        """
+        parts = self._displacement(at) if of == "displacement" else [design_blocks(self.model, at)]
+        rest = self.size - sum(part.shape[2] for part in parts)
+        if rest:
+            parts.append(np.zeros((len(at), 2, rest)))
+        return parts[0] if len(parts) == 1 else np.concatenate(parts, axis=2)
+
+    def _displacement(self, at: Places) -> list[Array]:
+        parts = [design_blocks(self.model, at)]
+        if len(self.potential):
+            parts.append(design_blocks(self.potential, at))
         if self.field:
             basis = self.field.basis(at.xy_mm)
             nothing = np.zeros_like(basis)
             parts += [np.stack([basis * self.field.sigma_um[0], nothing], axis=1),
                       np.stack([nothing, basis * self.field.sigma_um[1]], axis=1)]
-        return np.concatenate(parts, axis=2)
-
-    def position(self, at: Places, of: str) -> Array:
-        """Directions of a predicted position at points, (n, 2, size).
-
-        `of` "correction": what the corrected terms say; "displacement": all that is assumed, the field included.
-        """
-        if of == "displacement" or self.size == self.corrected:
-            return self.blocks(at)
-        nothing = np.zeros((len(at), 2, self.size - self.corrected))
-        return np.concatenate([design_blocks(self.model, at), nothing], axis=2)
+        return parts
 
     def fixed_um(self, xy_mm: Array, of: str) -> Array:
         """Standard uncertainty of a predicted position that no reading lowers, (n, 2): what the field's cut leaves out."""

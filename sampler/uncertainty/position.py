@@ -66,8 +66,8 @@ def worst_place(assumed: Assumed, layout: Layout, knowledge: Knowledge, region: 
     """The largest standard uncertainty of dx or dy in a region: raster, then refined around its worst places."""
     points = raster(layout, region, polygon_mm) if points is None else points
     u = position_u(assumed, layout, knowledge, points.xy_mm, points.cell, of)
-    at, axis = np.unravel_index(np.argmax(u), u.shape)
-    best = WorstPlace(float(u[at, axis]), (float(points.xy_mm[at, 0]), float(points.xy_mm[at, 1])), int(axis),
+    at, worse = divmod(int(np.argmax(u)), 2)
+    best = WorstPlace(float(u[at, worse]), (float(points.xy_mm[at, 0]), float(points.xy_mm[at, 1])), worse,
                       {name: int(index[at]) for name, index in points.cell.items()})
     if region == "marks" or not np.isfinite(best.u_um):
         return best
@@ -87,11 +87,11 @@ def worst_place(assumed: Assumed, layout: Layout, knowledge: Knowledge, region: 
             inside = inside_region(layout, region, polygon_mm, flat)
             for name, index in same.items():
                 inside &= _in_cell(layout, name, index, flat)
-            tried = np.full(len(flat), -1.0)
+            found = np.full(len(flat), -1.0)
             if inside.any():
-                tried[inside] = position_u(assumed, layout, knowledge, flat[inside],
+                found[inside] = position_u(assumed, layout, knowledge, flat[inside],
                                            {name: index[inside] for name, index in same.items()}, of)[:, axis]
-            tried = tried.reshape(len(centre), -1)
+            tried = found.reshape(len(centre), -1)
             pick = tried.argmax(axis=1)
             better = tried[np.arange(len(centre)), pick] > value
             centre = np.where(better[:, None], around[np.arange(len(centre)), pick], centre)

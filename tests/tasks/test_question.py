@@ -12,13 +12,23 @@ from invented_plans import core_layout
 from sampler.errors import InputError
 from sampler.model.basis import Model, ModelTerm
 from sampler.model.terms import FAMILIES
-from sampler.tasks.question import achieved, assumed_of, knowledge_of, limits_achieved, question
+from sampler.tasks.question import achieved as audit_of
+from sampler.tasks.question import assumed_of, limits_achieved, question
+from sampler.tasks.question import knowledge_of as knowledge_of_visits
 from sampler.tasks.study import Potential, RegionLimit, Study, TermLimit, TermPrior
 from sampler.uncertainty.noise import Noise
 
 AFFINE = Model(tuple(ModelTerm(name) for name in FAMILIES["affine"]))
 TERMS = TermLimit(("scale_x", "rotation"), 2.0)
 PANEL = RegionLimit("panel", 1.5)
+
+
+def achieved(asked, rows):
+    return audit_of(asked, asked.units.visits(rows))
+
+
+def knowledge_of(asked, rows):
+    return knowledge_of_visits(asked, asked.units.visits(rows))
 
 
 def study(*limits, per_side=9, **changes):
@@ -69,7 +79,7 @@ def test_alike_terms_are_named():
 
 
 def test_no_candidates_say_why():
-    with pytest.raises(InputError, match="no mark may be measured .*edge exclusion"):
+    with pytest.raises(InputError, match=r"no mark may be measured .*edge exclusion"):
         question(study(layout=replace(core_layout(8), edge_exclusion_mm=250.0)))
 
 

@@ -16,7 +16,7 @@ from sampler.uncertainty.position import position_u, worst_place
 
 def known(layout, assumed, rows):
     xy = layout.marks.xy_mm[rows]
-    return Knowledge.of(information(assumed.blocks(places(layout, xy)), assumed.prior_precision))
+    return Knowledge.of(information(assumed.readings(places(layout, xy), np.full(len(xy), "front")), assumed.prior_precision))
 
 
 def model(*names):
