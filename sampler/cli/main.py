@@ -8,10 +8,11 @@ import sys
 import click
 
 from sampler import __version__
-from sampler.errors import SamplerError
+from sampler.errors import CertificateError, SamplerError
 
 COMMANDS = {
     "plan": "the fewest sites that meet a study's limits, with proof, map and site list",
+    "certify": "proves a plan again, from its study, layout and certificate alone",
     "audit": "what sites that you chose achieve, and how far they are from the fewest",
 }
 """Every command with its one line of help; `sampler/cli/NAME.py` holds it as `command`."""
@@ -50,6 +51,11 @@ def main() -> None:
     """Entry point; faults of input go to stderr as one message and exit 1."""
     try:
         group()
+    except CertificateError as error:
+        click.echo(f"Refused: {error}", err=True)
+        sys.exit(BAD_INPUT)
     except SamplerError as error:
-        click.echo(f"{error}\nNothing was written.", err=True)
+        from sampler.report.summary import faults_text
+
+        click.echo(faults_text(error), err=True)
         sys.exit(BAD_INPUT)

@@ -27,6 +27,7 @@ def command(study: str, out: str, as_json: bool) -> None:
     Ctrl-C ends the search with the best plan so far and its bound.
     """
     from sampler.figures.map import plan_map
+    from sampler.files.certificate import encode_certificate
     from sampler.files.output import plan_json, sites_csv, write_results
     from sampler.files.study import read_study
     from sampler.report.summary import plan_summary
@@ -38,7 +39,10 @@ def command(study: str, out: str, as_json: bool) -> None:
         result = plan(asked, progress=show, stop=stop)
         end_progress(show)
         text = plan_json(result)
-        write_results(out, {"plan.json": text, "sites.csv": sites_csv(result), **plan_map(result)})
+        files: dict[str, bytes | str] = {"plan.json": text, "sites.csv": sites_csv(result), **plan_map(result)}
+        if result.certificate:
+            files["certificate.json"] = encode_certificate(result.certificate)
+        write_results(out, files)
     click.echo(text if as_json else plan_summary(result))
     if result.status == "cannot":
         sys.exit(CANNOT_BE_MET)

@@ -6,11 +6,15 @@ import base64
 import gzip
 import json
 import zlib
+from pathlib import Path
 from typing import Any
 
 import numpy as np
 
 from sampler.errors import CertificateError
+from sampler.files.faults import Faults
+from sampler.files.source import read_bytes, shown_path
+from sampler.tasks.certify import Certified
 
 COMPRESSED_ABOVE = 200_000
 GZIP = b"\x1f\x8b"
@@ -54,3 +58,19 @@ def decode_certificate(data: bytes, where: str = "certificate.json") -> dict[str
     if not isinstance(found, dict):
         raise CertificateError(f"{where}: not a certificate; plan again")
     return found
+
+
+def read_certificate(folder: str | Path) -> dict[str, Any]:
+    """The certificate beside a plan. Raises InputError when there is none, CertificateError when it is damaged."""
+    path = Path(folder) / "certificate.json"
+    faults = Faults(shown_path(path))
+    data = read_bytes(path, "the certificate.json of a result", faults)
+    faults.close()
+    assert data is not None
+    return decode_certificate(data, shown_path(path))
+
+
+def certified_json(result: Certified) -> str:
+    """What was proven, as JSON."""
+    return json.dumps({"proven": result.sentence, "n_sites": result.n_sites, "lower_bound": result.lower_bound,
+                       "fewest_proven": result.fewest_proven}, ensure_ascii=False)

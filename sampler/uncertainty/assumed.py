@@ -1,7 +1,8 @@
 """What is assumed of a panel: the corrected terms, and beside them what may be there without being corrected.
 
 All of it is one linear model with a prior: θ = corrected terms | potential terms | local field in dx | local field in dy |
-errors shared by readings (of one side, or after turning the panel over). A term without prior has infinite standard deviation; every prior is a visible row here, there is no other ridge.
+errors shared by readings (of one side, or after turning the panel over). A term without prior has infinite standard
+deviation; every prior is a visible row here, there is no other ridge.
 """
 
 from __future__ import annotations
