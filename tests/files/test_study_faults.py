@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from pathlib import Path
+
 import pytest
 from small_study import LAYOUT, MARKS, STUDY, faults_of, write_study
 
@@ -168,6 +170,30 @@ def test_files_that_are_no_study(tmp_path, content, phrase):
     assert len(faults) == 1
     assert phrase in faults[0]
     assert faults[0].startswith(path.as_posix())
+
+
+def test_files_that_cannot_be_read(tmp_path, monkeypatch):
+    def refuse(path):
+        raise PermissionError(13, "Permission denied", str(path))
+
+    path = write_study(tmp_path)
+    assert "cannot be read (embedded null byte)" in faults_of("a\0b.toml")[0]
+    monkeypatch.setattr(Path, "read_bytes", refuse)
+    assert faults_of(path)[0].endswith("cannot be read (Permission denied); give a study file (TOML) that may be read")
+    assert "this is a folder" in faults_of(tmp_path)[0]  # as on systems that refuse to read folders
+
+
+def test_a_table_where_tables_are_wanted(tmp_path):
+    faults = faults_of(write_study(tmp_path, STUDY[:STUDY.index("[[limit]]")] + "[limit]\nterms = 'all'\nmax = 1\n"))
+    assert faults[0].endswith("limit is a table; give tables [[limit]]")
+    faults = faults_of(write_study(tmp_path, "model = 3\n" + STUDY[:STUDY.index("[model]")] + STUDY[STUDY.index("[noise]"):]))
+    assert any(fault.endswith("model is 3; give a table [model]") for fault in faults)
+
+
+def test_the_nearest_of_very_many_ids(tmp_path):
+    marks = "id,x_mm,y_mm\n" + "".join(f"Mark{i:06},{i % 400 - 200}.3,{i // 400 - 125}.3\n" for i in range(40_000))
+    fault, = faults_of(write_study(tmp_path, STUDY.replace("E-c1r1-1", "mark031415"), marks=marks))
+    assert fault.endswith('"mark031415" is not a mark of the layout; did you mean "Mark031415"?')
 
 
 def test_a_folder_is_no_study(tmp_path):
