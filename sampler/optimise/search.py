@@ -132,7 +132,7 @@ def _search(problem: SiteProblem, began: float, until: float, rng: np.random.Gen
     polished = min(until, now + max(LEAST_POLISH, POLISH_SHARE * (now - began)))
     standing.chosen = np.sort(most_informative(parts, problem, standing.chosen, rng=rng.spawn(1)[0], deadline=polished,
                                                stop=stop))
-    reach = log_det_bound(parts, problem, standing.cost, rows=relaxed.rows, deadline=until)
+    reach = log_det_bound(parts, problem, standing.cost, deadline=until)
     return standing.result("proven" if proven else "interval", log_det=log_det(parts, problem, standing.chosen),
                            log_det_bound=reach.value, interrupted=not proven and ended())
 
