@@ -10,7 +10,8 @@ steps on the optimality conditions of
 limits there are, and at the optimum one row for each active limit is the whole proof, by convex duality. Nothing is believed
 of the result: relaxation.py computes the bound from z and y by summation over all sites.
 
-M depends on w through D = Σ_b q_b(q_b+1)/2 numbers, so the Hessian is diagonal plus rank D + rules: a step costs n·D².
+M depends on w through D = Σ_b q_b(q_b+1)/2 numbers, so the Hessian is diagonal plus rank D + rules: a step costs n·D², or
+n³ when D exceeds n.
 """
 
 from __future__ import annotations
@@ -34,6 +35,8 @@ MOST_OWED = 3.0
 """When the residuals are worth more than this many times the complementarity, the latter waits for them."""
 FLOOR = 1e-13
 """Weights, slacks and multipliers stay above this, so that ratios of them stay finite."""
+JITTER = 1e-14
+"""Share of the mean diagonal lent to a Hessian so that Cholesky's method takes it; it only turns a step by so little."""
 MOST_STEPS = 80
 MOST_IDLE = 10
 """Steps without a better bound or a smaller complementarity after which rounding is all that is left."""
@@ -71,6 +74,59 @@ class Restricted:
             flat = part.reshape(-1, block.q)
             found.append(block.prior + (flat * np.repeat(weights, part.shape[1])[:, None]).T @ flat)
         return found
+
+
+@dataclass(frozen=True, slots=True)
+class _Coordinates:
+    """What the Hessian is written over: the entries of each M_b and the rules, D + S in number, or the weights themselves.
+
+    `features` F (n, K): how a change of the weights moves the coordinates, Fᵀdw.
+    """
+
+    program: Restricted
+    rows: list[Array]
+    packed: bool
+    features: Array
+
+    @classmethod
+    def of(cls, program: Restricted, rows: list[Array]) -> _Coordinates:
+        """Packed entries when they are fewer than the sites."""
+        n, wide = len(program.cost), sum(block.q * (block.q + 1) // 2 for block in program.split.blocks)
+        if wide > n:
+            return cls(program, rows, False, np.eye(n))
+        return cls(program, rows, True, np.concatenate(
+            [Gram(program.split, program.sites).of(np.arange(n)), program.sides.T], axis=1))
+
+    def gradients(self, pool: RowPool) -> Array:
+        """The gradient of each limit and rule, (L + S, K)."""
+        if not self.packed:
+            return np.concatenate([pool.coefficients(self.program.sites), self.program.sides])
+        rules = len(self.program.level)
+        total = np.zeros((len(pool) + rules, self.features.shape[1]))
+        total[len(pool):, total.shape[1] - rules:] = np.eye(rules)
+        at = 0
+        for block, z, row in zip(pool.split.blocks, pool.pieces, pool.row, strict=True):
+            i, j, factor = _pairs(block.q)
+            np.add.at(total[:, at:at + len(i)], row, (z[i] * z[j]).T * factor)
+            at += len(i)
+        return total
+
+    def hessian(self, pool: RowPool, matrices: list[Array], gradients: Array, y: Array, variance: Array) -> Array:
+        """−Σ_l y_l ∇²(1/v_l): X ↦ 2 tr(X M⁻¹ X Z) less 2 Σ y_l v_l (z_lᵀX z_l)², positive semidefinite, (K, K)."""
+        limits = len(pool)
+        total = -(gradients[:limits].T * (2.0 * y[:limits] * variance)) @ gradients[:limits]
+        at = 0
+        for matrix, rows, quadratic in zip(matrices, self.rows, pool.quadratic(y[:limits]), strict=True):
+            inverse = np.asarray(np.linalg.inv(matrix), np.float64)
+            if self.packed:
+                size = len(matrix) * (len(matrix) + 1) // 2
+                total[at:at + size, at:at + size] += _curvature(inverse, quadratic)
+                at += size
+                continue
+            for one in np.moveaxis(rows, 1, 0):
+                for other in np.moveaxis(rows, 1, 0):
+                    total += 2.0 * (one @ inverse @ other.T) * (one @ quadratic @ other.T)
+        return np.asarray(total)
 
 
 def _pairs(q: int) -> tuple[NDArray[np.int64], NDArray[np.int64], Array]:
@@ -124,8 +180,8 @@ def _length(value: Array, move: Array) -> float:
 
 @dataclass(frozen=True, slots=True)
 class _Tangent:
-    """The program at an iterate: features F (n, D + S); gradients V (L + S, D + S) of the rows over them; the Hessian of
-    the limits over them, but for the part that the y/slack of the rows add; residuals of rows and of stationarity."""
+    """The program at an iterate: features F (n, K); gradients V (L + S, K) of the rows and the Hessian of the limits over
+    these coordinates, but for the part that the y/slack of the rows add; residuals of rows and of stationarity."""
 
     features: Array
     vectors: Array
@@ -149,8 +205,7 @@ class _Newton:
         self.stiff = np.argsort(-self.weight, kind="stable")[:vectors.shape[1]]
         loose = self.weight.copy()
         loose[self.stiff] = 0.0
-        values, turn = np.linalg.eigh(tangent.hessian + (vectors.T * loose) @ vectors)
-        self.root = np.concatenate([turn * np.sqrt(np.maximum(values, 0.0)),
+        self.root = np.concatenate([_root(tangent.hessian + (vectors.T * loose) @ vectors),
                                     vectors[self.stiff].T * np.sqrt(self.weight[self.stiff])], axis=1)
         self.diagonal = at.x / at.w + at.t / (1.0 - at.w)
         inner = self.root.T @ (features.T @ (features / self.diagonal[:, None])) @ self.root
@@ -171,6 +226,16 @@ class _Newton:
                         (rt + at.t * dw) / (1.0 - at.w))
 
 
+def _root(matrix: Array) -> Array:
+    """C with CCᵀ = a positive semidefinite matrix, up to rounding."""
+    with_jitter = matrix + JITTER * np.trace(matrix) / len(matrix) * np.eye(len(matrix))
+    try:
+        return np.asarray(np.linalg.cholesky(with_jitter), np.float64)
+    except np.linalg.LinAlgError:
+        values, turn = np.linalg.eigh(matrix)
+        return np.asarray(turn * np.sqrt(np.maximum(values, 0.0)), np.float64)
+
+
 def solve(program: Restricted, weights: Array, *, tolerance: float, stop: Callable[[], bool]) -> Point:
     """The optimum to a relative gap of `tolerance`, or the best iterate when `stop` or rounding ended it.
 
@@ -178,18 +243,18 @@ def solve(program: Restricted, weights: Array, *, tolerance: float, stop: Callab
     """
     split, cost = program.split, program.cost
     rows = [block.rows[program.sites] for block in split.blocks]
-    features = np.concatenate([Gram(split, program.sites).of(np.arange(len(cost))), program.sides.T], axis=1)
+    over = _Coordinates.of(program, rows)
     matrices = program.matrices(rows, weights)
     pool, variance = separate(split, matrices, program.limits)
     slack = np.maximum(_covered(program, variance, weights), 1e-3)
-    gradients = _gradients(program, pool)[:len(pool)]
-    mu = float(cost.sum() / max((features @ (gradients.T @ (1.0 / slack[:len(pool)]))).sum(), FLOOR))
+    gradients = over.gradients(pool)[:len(pool)]
+    mu = float(cost.sum() / max((over.features @ (gradients.T @ (1.0 / slack[:len(pool)]))).sum(), FLOOR))
     at = _Iterate(weights, slack, mu / slack, mu / weights, mu / (1.0 - weights))
     best, best_bound = Point(weights, at.y[:len(pool)], at.y[len(pool):], pool), -np.inf
     least, idle = np.inf, 0
     for _ in range(MOST_STEPS):
-        vectors = _gradients(program, pool)
-        primal, price = _covered(program, variance, at.w) - at.slack, features @ (vectors.T @ at.y)
+        vectors = over.gradients(pool)
+        primal, price = _covered(program, variance, at.w) - at.slack, over.features @ (vectors.T @ at.y)
         income = float(np.append(pool.right_hand_side, program.level) @ at.y)
         scale, bound = best_scale(income, cost, price)
         idle = 0 if bound > best_bound or at.mean() < least else idle + 1
@@ -201,8 +266,8 @@ def solve(program: Restricted, weights: Array, *, tolerance: float, stop: Callab
         if (value - bound <= tolerance * value and np.abs(primal).max() <= tolerance) or idle > MOST_IDLE or stop():
             break
         try:
-            newton = _Newton(at, _Tangent(features, vectors, _hessian(pool, matrices, vectors, at.y, variance), primal,
-                                          cost - price - at.x + at.t))
+            newton = _Newton(at, _Tangent(over.features, vectors, over.hessian(pool, matrices, vectors, at.y, variance),
+                                          primal, cost - price - at.x + at.t))
         except np.linalg.LinAlgError:  # the end of double precision; the best iterate stands
             break
         now, mean = at.products(), at.mean()
@@ -223,31 +288,6 @@ def _covered(program: Restricted, variance: Array, weights: Array) -> Array:
     return np.append(1.0 / variance - 1.0, program.sides @ weights - program.level)
 
 
-def _gradients(program: Restricted, pool: RowPool) -> Array:
-    """The gradient of each limit and rule over the features, (L + S, D + S)."""
-    wide = []
-    for block, z, row in zip(pool.split.blocks, pool.pieces, pool.row, strict=True):
-        i, j, factor = _pairs(block.q)
-        part = np.zeros((len(pool), len(i)))
-        np.add.at(part, row, (z[i] * z[j]).T * factor)
-        wide.append(part)
-    rules = len(program.level)
-    top = np.concatenate([*wide, np.zeros((len(pool), rules))], axis=1)
-    return np.concatenate([top, np.eye(rules, top.shape[1], top.shape[1] - rules)])
-
-
-def _hessian(pool: RowPool, matrices: list[Array], vectors: Array, y: Array, variance: Array) -> Array:
-    """−Σ_l y_l ∇²(1/v_l) over the features: X ↦ 2 tr(X M⁻¹ X Z) less 2 Σ y_l v_l (z_lᵀX z_l)², positive semidefinite."""
-    limits = len(pool)
-    total = -(vectors[:limits].T * (2.0 * y[:limits] * variance)) @ vectors[:limits]
-    at = 0
-    for matrix, quadratic in zip(matrices, pool.quadratic(y[:limits]), strict=True):
-        size = len(matrix) * (len(matrix) + 1) // 2
-        total[at:at + size, at:at + size] += _curvature(np.asarray(np.linalg.inv(matrix), np.float64), quadratic)
-        at += size
-    return np.asarray(total)
-
-
 def best_scale(income: float, cost: Array, price: Array) -> tuple[float, float]:
     """The factor f ≥ 0 on all duals that makes f·income + Σ min(0, cost − f·price) largest, and that value.
 
@@ -257,10 +297,11 @@ def best_scale(income: float, cost: Array, price: Array) -> tuple[float, float]:
     paid = np.flatnonzero(price > 0)
     kink = cost[paid] / price[paid]
     order = np.argsort(kink)
-    spent = np.cumsum(price[paid[order]])
-    at = int(np.searchsorted(spent, income))
-    if income <= 0 or at == len(order):  # nothing to earn, or more than every site together can pay
-        factor = 0.0 if income <= 0 else 1.0
+    spent = np.append(0.0, np.cumsum(price[paid[order]]))
+    if income <= 0:
+        factor = 0.0
+    elif income > spent[-1]:  # more than every site together can pay: no set will do, and the bound says so
+        factor = max(1.0, 2.0 * float(cost.sum()) / (income - spent[-1]))
     else:
-        factor = float(kink[order[at]])
+        factor = float(kink[order[np.searchsorted(spent, income) - 1]])
     return factor, factor * income + float(np.minimum(0.0, cost - factor * price).sum())
