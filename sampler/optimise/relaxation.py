@@ -32,7 +32,7 @@ GENERATED_TOLERANCE = 1e-5
 """The same when sites are generated: the last few of a million candidates gain nothing that rounding up would show."""
 ALL_SITES_WORK = 6e7
 """All sites are in the program from the start while a step on them costs fewer multiplications than this."""
-FIRST_SITES = 2500
+FIRST_SITES, LEAST_SITES = 2500, 600
 ENTERING_BEST, ENTERING_ANY = 400, 600
 LEAVES_ABOVE = 0.3
 """A site leaves the program when its reduced cost exceeds this share of its cost."""
@@ -214,12 +214,12 @@ def _first_sites(fixed: Split, free: NDArray[np.int64], goal: float) -> NDArray[
     `goal`: the worst variance ratio with every allowed site; the sample must come half-way from the limit to it.
     """
     width = sum(block.q * (block.q + 1) // 2 for block in fixed.blocks)
-    if len(free) <= FIRST_SITES or len(free) * width**2 <= ALL_SITES_WORK:
+    number = int(min(max(ALL_SITES_WORK / width**2, LEAST_SITES), FIRST_SITES))
+    if len(free) <= number or len(free) * width**2 <= ALL_SITES_WORK:
         return free
     rng = np.random.default_rng(0)
     extreme = [free[end(block.rows[free, axis], axis=0)] for block in fixed.blocks
                for axis in range(block.rows.shape[1]) for end in (np.argmax, np.argmin)]
-    number = FIRST_SITES
     while number < len(free):
         sites = np.unique(np.concatenate([rng.choice(free, number, replace=False), *extreme]))
         matrices = [information(block, np.ones(len(sites)), sites) for block in fixed.blocks]
