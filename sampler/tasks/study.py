@@ -38,10 +38,14 @@ class RegionLimit:
 
 @dataclass(frozen=True, slots=True)
 class TermPrior:
-    """Prior standard deviation of each named corrected term, in the term's unit."""
+    """Prior standard deviation of each named corrected term about its prior mean, in the term's unit.
+
+    A plan needs the deviation only; the mean is for fits.
+    """
 
     terms: tuple[str, ...]
     sd: float
+    mean: float = 0.0
 
 
 @dataclass(frozen=True, slots=True)
