@@ -5,6 +5,7 @@ from __future__ import annotations
 import json
 import math
 import os
+import shutil
 from dataclasses import replace
 from pathlib import Path
 
@@ -219,8 +220,12 @@ class Struck(BaseException):
     """Stands for whatever ends a program: not an Exception."""
 
 
-def strike(monkeypatch, call, error=Struck):
-    """Makes the given number of the calls that change a folder fail: makes of files and folders, renames."""
+STEPS = ((os, "rename"), (os, "fsync"), (Path, "mkdir"))
+CLEARING = (shutil, "rmtree")
+
+
+def strike(monkeypatch, call, error=Struck, steps=STEPS):
+    """Makes the given one of the calls that change a folder fail."""
     made = {"calls": 0}
 
     def counted(plain):
@@ -231,7 +236,7 @@ def strike(monkeypatch, call, error=Struck):
             return plain(*args, **kwargs)
         return wrapper
 
-    for owner, name in ((os, "rename"), (os, "fsync"), (Path, "mkdir")):
+    for owner, name in steps:
         monkeypatch.setattr(owner, name, counted(getattr(owner, name)))
     return made
 
@@ -265,7 +270,7 @@ def test_a_failure_leaves_no_new_folder(tmp_path, call, monkeypatch):
 
 
 @pytest.mark.skipif(not hasattr(os, "fork"), reason="ends a copy of this process")
-@pytest.mark.parametrize("call", range(1, 15))
+@pytest.mark.parametrize("call", range(1, 17))
 def test_a_killed_process_is_put_right_by_the_next(tmp_path, call):
     """The process ends at a step, without a chance to tidy; then the result is whole after the next call's recovery."""
     old = old_result(tmp_path / "out")
@@ -273,7 +278,8 @@ def test_a_killed_process_is_put_right_by_the_next(tmp_path, call):
     if pid == 0:
         patch = pytest.MonkeyPatch()
         try:
-            strike(patch, call, error=type("Killed", (BaseException,), {"__init__": lambda self: os._exit(0)}))
+            strike(patch, call, error=type("Killed", (BaseException,), {"__init__": lambda self: os._exit(0)}),
+                   steps=(*STEPS, CLEARING))
             write_results(tmp_path / "out", NEW)
         finally:
             os._exit(1)
