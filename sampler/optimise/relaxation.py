@@ -22,7 +22,7 @@ from numpy.typing import NDArray
 from sampler.optimise.blocks import Array, Split, column_variances
 from sampler.optimise.interior import Point, Restricted, best_scale, solve
 from sampler.optimise.problem import SiteProblem
-from sampler.optimise.rows import RowPool, information, quadratic_prices, separate
+from sampler.optimise.rows import RowPool, information, separate
 
 FEASIBLE = 1.0 + 1e-9
 """A variance ratio up to this meets its limit: rounding of double precision."""
@@ -133,7 +133,7 @@ class _Bounder:
         problem, rows = self.problem, point.rows
         kept = np.flatnonzero(point.duals > NEGLIGIBLE * point.duals.max(initial=0.0))
         rows, y = replace(rows.take(kept), split=self.split), point.duals[kept]  # whose prior has no required sites in it
-        price = quadratic_prices(self.split, rows.quadratic(y)) + self.sides.prices(point.rule_duals, problem.n)
+        price = rows.prices(y) + self.sides.prices(point.rule_duals, problem.n)
         required = problem.required
         income = float(y @ rows.right_hand_side + point.rule_duals @ self.sides.level - price[required].sum())
         scale, bound = best_scale(income, problem.cost[self.free], price[self.free])

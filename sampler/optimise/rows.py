@@ -67,8 +67,25 @@ class RowPool:
         return [(z * duals[row]) @ z.T for z, row in zip(self.pieces, self.row, strict=True)]
 
     def prices(self, duals: Array, sites: Sites = None) -> Array:
-        """Σ_k y_k ‖Bᵢ z_k‖² at the given sites (all by default): what the rows pay for each site."""
-        return quadratic_prices(self.split, self.quadratic(duals), sites)
+        """Σ_k y_k ‖Bᵢ z_k‖² at the given sites (all by default): what the rows pay for each site.
+
+        Summed as squares, which nothing cancels in, of at most q columns per block.
+        """
+        number = self.split.blocks[0].n if sites is None else len(sites)
+        total = np.zeros(number)
+        for block, z, row in zip(self.split.blocks, self.pieces, self.row, strict=True):
+            root = z * np.sqrt(duals[row])
+            if root.shape[1] > block.q:
+                turn, size, _ = np.linalg.svd(root, full_matrices=False)
+                root = turn * size
+            if not root.any():
+                continue
+            step = max(1, CHUNK_NUMBERS // max(1, 2 * block.rows.shape[1] * block.q))
+            for start in range(0, number, step):
+                part = block.rows[start:start + step] if sites is None else block.rows[sites[start:start + step]]
+                seen = part.reshape(-1, block.q) @ root
+                total[start:start + step] += np.einsum("ij,ij->i", seen, seen).reshape(len(part), -1).sum(axis=1)
+        return total
 
     def take(self, index: NDArray[np.int64]) -> RowPool:
         """The rows named, in that order."""
@@ -114,22 +131,6 @@ class RowPool:
         limit = self.split.limit_index[self.limit]
         demanded = (problem.directions[limit] * total).sum(axis=1) / problem.tau[limit]
         return total / demanded[:, None], limit
-
-
-def quadratic_prices(split: Split, quadratic: list[Array], sites: Sites = None) -> Array:
-    """Σ_b tr(B_bᵢ Z_b B_bᵢᵀ) at the given sites (all by default)."""
-    number = split.blocks[0].n if sites is None else len(sites)
-    total = np.zeros(number)
-    for block, matrix in zip(split.blocks, quadratic, strict=True):
-        if not matrix.any():
-            continue
-        step = max(1, CHUNK_NUMBERS // max(1, 2 * block.rows.shape[1] * block.q))
-        for start in range(0, number, step):
-            part = block.rows[start:start + step] if sites is None else block.rows[sites[start:start + step]]
-            flat = part.reshape(-1, block.q)
-            total[start:start + step] += np.einsum("ij,ij->i", flat @ matrix, flat).reshape(
-                len(part), -1).sum(axis=1)
-    return total
 
 
 def information(block: Block, weights: Array, sites: Sites = None) -> Array:
