@@ -15,7 +15,7 @@ LEVELS = [["errors"], ["panel"], ["model"], ["uncertainty"], ["route", "optimise
 LEVEL = {room: level for level, rooms in enumerate(LEVELS) for room in rooms}
 DOORS = {"shapely": {"panel"}, "cvxpy": {"optimise"}, "highspy": {"optimise"}, "matplotlib": {"figures"},
          "click": {"cli"}, "tomllib": {"files"}, "csv": {"files"}, "json": {"files"}, "pyarrow": {"files"},
-         "jinja2": {"report"}}
+         "jinja2": {"report"}, "ezdxf": {"files"}, "gdstk": {"files"}, "gerbonara": {"files"}}
 BANNED_NAMES = {"utils", "misc", "helpers", "base", "common"}
 MODULES = sorted(ROOT.rglob("*.py"))
 

@@ -7,9 +7,10 @@ import math
 from pathlib import Path
 from typing import Any
 
+from sampler.errors import InputError
 from sampler.files.faults import Faults
 from sampler.files.schema import Bounds, Key, Values, format_number, number, read_keys, table, tables, text
-from sampler.files.source import read_toml, sha256, shown_path
+from sampler.files.source import read_bytes, read_toml, sha256, shown_path
 from sampler.tasks.budget import Blame, Budget, BudgetResult, Channel, Contributor
 from sampler.tasks.study import Source
 
@@ -27,6 +28,7 @@ BUDGET = [Key("format", format_number, "format = 1"), Key("name", text),
           Key("via_um", DIAMETER, "the diameter of the via"), Key("pad_um", DIAMETER, "the diameter of its pad"),
           Key("required_ring_um", SIGMA, default=0.0), Key("coverage_factor", FACTOR, default=3.0),
           Key("contributor", tables(*CONTRIBUTOR), default=()), Key("channel", table(*CHANNEL))]
+A_PLAN = "the plan.json or audit.json of a plan with sites"
 SMALLEST_PAD_UM = 1.0
 """A smaller pad was probably given in mm."""
 
@@ -54,6 +56,28 @@ def read_budget(path: str | Path) -> Budget:
     return Budget(values["name"] or Path(path).stem, via, pad, values["required_ring_um"], contributors,
                   values["coverage_factor"], None if channel is None else Channel(**channel),
                   Source(shown_path(path), sha256(data)), tuple(faults.warnings))
+
+
+def read_position(path: str | Path) -> tuple[float, float]:
+    """The worst predicted position k·u in µm of a plan.json or audit.json, infinite when not determined, and its k.
+
+    Raises InputError.
+    """
+    faults = Faults(shown_path(path))
+    data = read_bytes(path, A_PLAN, faults)
+    faults.close()
+    assert data is not None
+    try:
+        content = json.loads(data)
+        worst, k = content["worst_position"]["predicted"], content["coverage_factor"]
+        k_u = math.inf if worst is None else float(worst)
+        if not (k_u >= 0 and float(k) > 0 and math.isfinite(k)):
+            raise ValueError
+    except (ValueError, TypeError, KeyError) as error:
+        raise InputError(f"{shown_path(path)}: this holds no worst_position with its coverage_factor; give {A_PLAN}") from error
+    if content.get("status") == "cannot":
+        raise InputError(f"{shown_path(path)}: this plan found that its limits cannot be met and has no sites; give one that has")
+    return k_u, float(k)
 
 
 def _contributors(values: Values, faults: Faults) -> tuple[Contributor, ...]:

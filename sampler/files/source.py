@@ -31,8 +31,8 @@ def sha256(*parts: bytes) -> str:
     return digest.hexdigest()
 
 
-def read_bytes(path: str | Path, what: str, faults: Faults) -> bytes | None:
-    """The bytes of a text file; None with a fault when it is missing, a folder, unreadable, empty or binary.
+def read_bytes(path: str | Path, what: str, faults: Faults, *, binary: bool = False) -> bytes | None:
+    """The bytes of a file; None with a fault when it is missing, a folder, unreadable, empty or, unless allowed, binary.
 
     `what` says which kind of file is wanted, such as "a study file (TOML)".
     """
@@ -50,7 +50,7 @@ def read_bytes(path: str | Path, what: str, faults: Faults) -> bytes | None:
     else:
         if not data.strip(b"\xef\xbb\xbf \t\r\n"):
             faults.add(f"the file is empty; give {what}")
-        elif b"\0" in data[:65536] and not data.startswith(UTF16_MARKS):
+        elif not binary and b"\0" in data[:65536] and not data.startswith(UTF16_MARKS):
             faults.add(f"this is a binary file; give {what}")
         else:
             return data

@@ -5,10 +5,12 @@ from __future__ import annotations
 import json
 import math
 
+import invented_plans as invented
 import pytest
 
 from sampler.errors import InputError
-from sampler.files.budget import budget_json, read_budget
+from sampler.files.budget import budget_json, read_budget, read_position
+from sampler.files.output import plan_json
 from sampler.tasks.budget import Channel, Contributor, budget
 
 GOOD = """
@@ -122,6 +124,28 @@ def test_files_that_are_no_budget(tmp_path, content, expected):
 def test_missing_file_and_folder(tmp_path):
     assert "no such file" in faults_of(tmp_path / "none.toml")[0]
     assert "this is a folder" in faults_of(tmp_path)[0]
+
+
+def test_position_of_a_written_plan(tmp_path):
+    plan = invented.first_plan()
+    (tmp_path / "plan.json").write_text(plan_json(plan), encoding="utf-8")
+    k_u, k = read_position(tmp_path / "plan.json")
+    assert (k_u, k) == (plan.audit.worst_position.predicted, 3.0)
+
+
+@pytest.mark.parametrize(("content", "expected"), [
+    ("{}", "no worst_position"), ("[]", "no worst_position"), ("{", "no worst_position"), ("", "empty"),
+    ('{"worst_position": {"predicted": "x"}, "coverage_factor": 3}', "no worst_position"),
+    ('{"worst_position": {"predicted": 1}, "coverage_factor": 0}', "no worst_position"),
+    ('{"worst_position": {"predicted": 1}, "coverage_factor": 3, "status": "cannot"}', "cannot be met")])
+def test_files_that_hold_no_position(tmp_path, content, expected):
+    with pytest.raises(InputError, match=expected):
+        read_position(written(tmp_path, content))
+
+
+def test_position_that_is_not_determined(tmp_path):
+    path = written(tmp_path, '{"worst_position": {"predicted": null}, "coverage_factor": 2}')
+    assert read_position(path) == (math.inf, 2.0)
 
 
 @pytest.mark.parametrize("k_u", [None, 2.0, 13.0, math.inf])

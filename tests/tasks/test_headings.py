@@ -8,7 +8,8 @@ from sampler.tasks.headings import guess_columns, heading
 
 
 @pytest.mark.parametrize(("text", "axis", "unit"), [
-    ("X", "x", ""), ("x [um]", "x", "um"), ("X (µm)", "x", "um"), ("y_mm", "y", "mm"), ("PosX", "x", ""), ("pos_y", "y", ""),
+    ("X", "x", ""), ("posx", "x", ""), ("x [um]", "x", "um"), ("X (µm)", "x", "um"), ("y_mm", "y", "mm"),
+    ("PosX", "x", ""), ("pos_y", "y", ""),
     ("xpos", "x", ""), ("Koordinate Y (Zoll)", "y", "inch"), ("X-Koordinate [mm]", "x", "mm"), ("X-Soll", "x", ""),
     ("NominalX", "x", ""), ("x in mm", "x", "mm"), ("X (in)", "x", "inch"), ("XMM", "x", "mm"), ("Y/mm", "y", "mm"),
     ("Ycenter", "y", ""), ("X [m]", "x", "m"), ("y mil", "y", "mil"), ("dx_um", "", "um"), ("x_error", "", ""),

@@ -128,6 +128,11 @@ def test_marks_at_one_place_only(marks):
         start(None, marks, unit="mm")
 
 
+def test_one_mark_on_the_panel_determines_nothing():
+    with pytest.raises(InputError, match="do not determine even translation, rotation and magnification"):
+        start(None, np.array([[0.0, 0.0], [300.0, 0.0]]), options=StartOptions(unit="mm", origin="centre", panel_mm=(200, 200)))
+
+
 def test_no_grid_is_said(rng):
     begun = start(None, rng.uniform(-240, 240, (300, 2)))
     assert begun.layout.grids == ()
