@@ -97,7 +97,7 @@ def _plan(asked: Question, found: Found, best_possible: Audit, began: float) -> 
 @dataclass(frozen=True, slots=True)
 class Found:
     """`units`: the best set that an audit has confirmed, or None. `bound` is on the search's objective, in sites, stops or
-    seconds; `reason` what the search said when it found no set."""
+    seconds."""
 
     units: Indices | None
     bound: float
@@ -105,7 +105,6 @@ class Found:
     proven: bool
     log_det_bound: float
     certificate: dict[str, Any]
-    reason: str
     interrupted: bool
 
 
@@ -141,12 +140,14 @@ class _Search:
                 if not growing or result.status == "proven":
                     break
                 growing = False
-            if result.interrupted or time.monotonic() >= self.until:
-                if self.best is None and missed:
+            if self._over():
+                if self.best is None:
                     self._repair(result)
                 break
-        assert result is not None
-        return self._found(result)
+        return self._found()
+
+    def _over(self) -> bool:
+        return time.monotonic() >= self.until or (self.stop is not None and self.stop())
 
     def _problem(self) -> SiteProblem:
         problem = problem_of(self.asked, self.limits, self.tighten)
@@ -198,17 +199,16 @@ class _Search:
             if result.chosen is None:
                 return
             if not self._missed(result.chosen):
-                self._note_found(replace(result, interrupted=True))
+                self._note_found(result)
                 return
 
-    def _found(self, last: SearchResult) -> Found:
+    def _found(self) -> Found:
         best, bound = self.best, self.bound + self.constant
         if best is None:
-            return Found(None, bound, bound if self.cost is None else math.nan, False, math.nan, self.certificate,
-                         last.status, last.interrupted)
+            return Found(None, bound, bound if self.cost is None else math.nan, False, math.nan, self.certificate, self._over())
         proven = self.cost is None and math.ceil(self.bound - 1e-6) >= self._objective(best)
         return Found(best.chosen, bound, bound if self.cost is None else math.nan, proven, best.log_det_bound,
-                     self.certificate, best.status, last.interrupted)
+                     self.certificate, not proven and self._over())
 
 
 def _costs(asked: Question) -> tuple[NDArray[np.float64] | None, float]:
