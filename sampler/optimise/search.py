@@ -33,6 +33,8 @@ Indices = NDArray[np.int64]
 
 ROUNDING = 1e-7
 """A bound this little above a whole number, relatively, is not rounded up."""
+COST_GAP = 1e-3
+"""Costs that are not whole numbers are closed in on to this share: sets of nearly the same cost are hard to tell apart."""
 FIRST_TURN = 0.2
 TURN_GROWTH = 3.0
 """Seconds that exchange, and then the tree, work before the other has its turn, and how they grow. They do not depend on
@@ -139,22 +141,27 @@ def _search(problem: SiteProblem, began: float, until: float, rng: np.random.Gen
 
 def _close(standing: _Standing, parts: Split, relaxed: Relaxation, step: float | None, rng: np.random.Generator,
            until: float, stop: Callable[[], bool] | None) -> None:
-    """Exchange from above and the tree from below, in turns, until they meet or time ends."""
+    """Exchange from above and the tree from below, in turns, until they meet or time ends.
+
+    When costs are not whole numbers they meet when the tree has excluded all below the best cost less COST_GAP of it.
+    """
     problem, turn = standing.problem, FIRST_TURN
     while time.monotonic() < until and not (stop is not None and stop()):
         least = rounded_up(standing.bound, step)
-        if least >= standing.cost * (1.0 - ROUNDING) or least > most_cost(problem):
+        enough = standing.cost * (1.0 - (ROUNDING if step is not None else COST_GAP))
+        if least >= enough or least > most_cost(problem):
             return
         standing.offer(fewest(parts, problem, weights=relaxed.weights, reduced_costs=relaxed.reduced_costs,
                               upper=None if standing.chosen is None else standing.cost, lower=least,
                               rng=rng.spawn(1)[0], deadline=min(until, time.monotonic() + turn), stop=stop,
                               on_found=standing.offer))
         left = min(turn, until - time.monotonic())
-        if step is not None and least < standing.cost * (1.0 - ROUNDING) and left > 0.0:
-            decision = decide(parts, problem, least, rows=relaxed.rows, weights=relaxed.weights, stop=stop, seconds=left)
+        asked = least if step is not None else standing.cost * (1.0 - COST_GAP)
+        if asked < standing.cost * (1.0 - ROUNDING) and left > 0.0:
+            decision = decide(parts, problem, asked, rows=relaxed.rows, weights=relaxed.weights, stop=stop, seconds=left)
             standing.offer(decision.chosen)
             if decision.status == "impossible":
-                standing.prove(least + step, decision.certificate)
+                standing.prove(asked + (step or 0.0), decision.certificate)
                 continue
         turn *= TURN_GROWTH
 
