@@ -15,6 +15,7 @@ from sampler.errors import InputError
 from sampler.model.basis import Model, ModelTerm, design_blocks, places
 from sampler.model.terms import FAMILIES
 from sampler.panel.layout import EDGE_TOLERANCE_MM, Grid, Layout, Sites
+from sampler.tasks.budget import rounded
 from sampler.tasks.headings import UNITS_MM
 from sampler.tasks.repetition import Repetition, repetitions, short
 from sampler.uncertainty.information import Knowledge, information, whiten
@@ -34,7 +35,7 @@ CENTRED = 0.02
 """Marks whose extent is centred on zero to this share of it are given from the panel's centre."""
 INVENTED_MARK_UM = 0.25
 INVENTED_LOCAL_UM = 0.5
-WANTED_SITES = 24
+WANTED_SITES = 20
 """The invented position limit is one that about so many well placed sites meet."""
 MODELS = (("affine", "trapezoid"), ("affine",), ("similarity",))
 
@@ -227,23 +228,31 @@ def _grids(xy_mm: Array, size: tuple[float, float], findings: list[str]) -> tupl
 
 
 def _question(layout: Layout, findings: list[str]) -> tuple[tuple[str, ...], float]:
-    """The largest model that the marks determine, and a position limit over the panel that about `WANTED_SITES` meet."""
-    half = np.asarray(layout.half_mm)
-    inside = (np.abs(layout.marks.xy_mm) <= half + EDGE_TOLERANCE_MM).all(axis=1)
-    sites = places(layout, layout.marks.xy_mm[inside])
-    corners = places(layout, layout.outline_mm)
-    sigma = math.hypot(INVENTED_MARK_UM, INVENTED_LOCAL_UM)
+    """The largest model that the marks determine, and a position limit over the panel that about `WANTED_SITES` meet.
+
+    These families know most from marks in the corners (the D-optimal support of a bilinear model on a square), so the limit is
+    what the marks nearest to the four corners reach; with it the marks that there are can always meet it.
+    """
+    inside = (np.abs(layout.marks.xy_mm) <= np.asarray(layout.half_mm) + EDGE_TOLERANCE_MM).all(axis=1)
+    xy = layout.marks.xy_mm[inside]
+    distance = np.abs(xy[:, None] - layout.outline_mm).max(axis=2)
+    nearest = np.unique(np.argsort(distance, axis=0, kind="stable")[:WANTED_SITES // 4])
     for families in MODELS:
         model = Model(tuple(ModelTerm(term) for term in dict.fromkeys(name for one in families for name in FAMILIES[one])))
-        known = Knowledge.of(information(whiten(design_blocks(model, sites), np.full((len(sites), 2), sigma))))
-        if known.determined and 2 * len(sites) >= len(model):
-            # Position variance of these families is greatest in a corner of the panel.
-            worst = 3 * math.sqrt(known.variance(design_blocks(model, corners).reshape(-1, len(model))).max())
-            fewer = math.sqrt(len(sites) / min(WANTED_SITES, max(1.0, 0.6 * len(sites))))
-            position = worst * max(fewer, 1.05)
-            step = 10.0 ** (math.floor(math.log10(position)) - 1)
+        for chosen in (xy[nearest], xy):
+            worst = _worst_position(layout, model, chosen)
+            if not math.isfinite(worst):
+                continue
             if families != MODELS[0]:
                 findings.append(f"model: {' and '.join(families)}, because these marks determine no larger one")
-            return families, float(f"{math.ceil(position / step) * step:.6g}")
+            return families, rounded(worst, 2, up=True)
     raise InputError(f"{len(layout.marks)} marks in these places do not determine even translation, rotation and magnification; "
                      "give at least two marks apart from each other")
+
+
+def _worst_position(layout: Layout, model: Model, xy_mm: Array) -> float:
+    """The worst 3·u in µm of dx and dy over the panel, which is in one of its corners, with the invented noise."""
+    sigma = math.hypot(INVENTED_MARK_UM, INVENTED_LOCAL_UM)
+    blocks = whiten(design_blocks(model, places(layout, xy_mm)), np.full((len(xy_mm), 2), sigma))
+    corners = design_blocks(model, places(layout, layout.outline_mm)).reshape(-1, len(model))
+    return 3 * math.sqrt(Knowledge.of(information(blocks)).variance(corners).max())
