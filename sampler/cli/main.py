@@ -14,6 +14,9 @@ COMMANDS = {
     "plan": "the fewest sites that meet a study's limits, with proof, map and site list",
     "certify": "proves a plan again, from its study, layout and certificate alone",
     "audit": "what sites that you chose achieve, and how far they are from the fewest",
+    "start": "a layout and a study, ready to run, from a bare table of marks",
+    "bring": "the same from a DXF, GDSII, OASIS, Gerber or Excellon file",
+    "budget": "from pad and via to the position limit, and from a plan to the pad it supports",
 }
 """Every command with its one line of help; `sampler/cli/NAME.py` holds it as `command`."""
 

@@ -20,6 +20,31 @@ json_option = click.option("--json", "as_json", is_flag=True, help="Print the re
 SECONDS_BETWEEN_LINES = 0.2
 
 
+def start_options(command: Callable[..., Any]) -> Callable[..., Any]:
+    """What an engineer says of a bare list of marks instead of having it guessed."""
+    for option in (
+            click.option("--panel", nargs=2, type=float, metavar="WIDTH HEIGHT", help="Size of the panel, mm."),
+            click.option("--origin", default="", metavar="WHERE", help="Where the coordinates start: centre or lower-left."),
+            click.option("--unit", default="", help="Unit of the coordinates: mm, um, inch, mil or m.")):
+        command = option(command)
+    return command
+
+
+def show_start(begun: Any, out: str, as_json: bool) -> None:
+    """Writes what `start` and `bring` begin with, and says what was guessed and what comes next."""
+    from sampler.files.output import write_results
+    from sampler.files.start import start_files, start_json
+
+    write_results(out, dict(start_files(begun)))
+    if as_json:
+        click.echo(start_json(begun))
+        return
+    for finding in begun.findings:
+        click.echo(finding)
+    click.echo(f"Written: {out}/study.toml, layout.toml, marks.csv. Look through study.toml, then: sampler plan {out}/study.toml "
+               f"--out {out}/plan")
+
+
 @contextmanager
 def interruptible() -> Iterator[Callable[[], bool]]:
     """Gives `stop()`, true after Ctrl-C; a second Ctrl-C ends the program as usual."""

@@ -64,6 +64,15 @@ def start_files(begun: Start) -> dict[str, str]:
     return {"study.toml": study_toml(begun), "layout.toml": layout_toml(begun), "marks.csv": marks_csv(begun)}
 
 
+def start_json(begun: Start) -> str:
+    """What was found and guessed, as JSON."""
+    layout = begun.layout
+    return json.dumps({"name": layout.name, "marks": len(layout.marks), "width_mm": layout.width_mm,
+                       "height_mm": layout.height_mm, "origin": begun.origin, "grids": [grid.name for grid in layout.grids],
+                       "model": list(begun.families), "position_um": begun.position_um, "findings": list(begun.findings)},
+                      ensure_ascii=False)
+
+
 def marks_csv(begun: Start) -> str:
     """The marks in mm in the layout's own frame."""
     layout = begun.layout

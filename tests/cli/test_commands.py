@@ -13,7 +13,7 @@ import sampler
 from sampler.cli.main import COMMANDS, group
 
 ROOT = Path(__file__).parents[2]
-WITHOUT_OUT = {"certify", "budget"}
+WITHOUT_OUT = {"certify"}
 """Commands that only read and print."""
 
 
