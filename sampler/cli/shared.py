@@ -35,7 +35,7 @@ def show_start(begun: Any, out: str, as_json: bool) -> None:
     from sampler.files.output import write_results
     from sampler.files.start import start_files, start_json
 
-    write_results(out, dict(start_files(begun)))
+    write_results(out, dict(start_files(begun)), must_be_new=True)
     if as_json:
         click.echo(start_json(begun))
         return

@@ -135,16 +135,21 @@ def _json(values: dict[str, Any]) -> str:
     return "{" + ",\n ".join(lines) + "}\n"
 
 
-def write_results(folder: str | Path, files: Mapping[str, bytes | str]) -> None:
+def write_results(folder: str | Path, files: Mapping[str, bytes | str], *, must_be_new: bool = False) -> None:
     """Writes a result, all its files or none; an existing result in the folder is replaced whole or not at all.
 
+    `must_be_new`: refuses when one of the files is there already, for files that people go on to edit.
+
     A new folder is built beside its place and then renamed. In a folder that exists, the new files are first written
-    and flushed to a folder inside it; then the old result's files (`RESULT_FILES` and those in `files`) move away, the
-    new ones in, and the first of `files` comes last, so that whoever reads it finds all the others. Other files are
-    never touched. A failure puts the old files back; what a killed process left is put right by the next call.
+    and flushed to a folder inside it; then the old result's files (those in `files`, and for a plan or an audit all
+    `RESULT_FILES`) move away, the new ones in, and the first of `files` comes last, so that whoever reads it finds all the
+    others. Other files are never touched. A failure puts the old files back; what a killed process left is put right by the next call.
     Raises InputError when the folder cannot be written.
     """
     target = Path(folder)
+    if must_be_new and (there := [name for name in files if os.path.lexists(target / name)]):
+        raise InputError(f"{shown_path(target / there[0])} exists and may have been edited; give another folder with --out, or "
+                         "remove it first")
     try:
         if target.is_dir():
             _recover(target)
@@ -177,7 +182,7 @@ def _replace(target: Path, files: Mapping[str, bytes | str]) -> None:
     try:
         _write_all(after, files)
         before = _new_folder(target, BEFORE)
-        for name in dict.fromkeys([*files, *RESULT_FILES]):
+        for name in dict.fromkeys([*files, *(RESULT_FILES if set(files) & set(RESULT_FILES) else ())]):
             if os.path.lexists(target / name):
                 os.rename(target / name, before / name)
         ready = target / after.name.replace(AFTER, READY)

@@ -3,12 +3,10 @@
 from __future__ import annotations
 
 import json
-import math
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
-from sampler.errors import InputError
 from sampler.files.faults import Faults
 from sampler.files.schema import Key, format_number, read_keys, table, tables, text
 from sampler.files.source import read_bytes, shown_path
@@ -76,12 +74,3 @@ def read_plan(path: str | Path) -> PlanFile:
 
 def _no_constant(name: str) -> float:
     raise ValueError(f"{name} is not a JSON number")
-
-
-def plan_position(plan: PlanFile) -> tuple[float, float]:
-    """A plan's worst predicted position over the panel, k·u in µm (infinite when not determined), and its k."""
-    try:
-        predicted = plan.values["worst_position"]["predicted"]
-        return math.inf if predicted is None else float(predicted), float(plan.values["coverage_factor"])
-    except (KeyError, TypeError, ValueError) as error:
-        raise InputError(f"{shown_path(plan.path)}: worst_position or coverage_factor is missing; plan again") from error
