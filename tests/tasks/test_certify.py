@@ -54,7 +54,7 @@ def planned(study: Study) -> tuple[dict, dict]:
         if decision.status == "possible":
             break
         certificate, bound, count = decision.certificate, count + 1.0, count + 1
-    audit = achieved(asked, decision.chosen)
+    audit = achieved(asked, asked.units.visits(decision.chosen))
     certificate = stated(certificate, study, asked.limits)
     origin = np.asarray(study.layout.origin_mm)
     plan = {
