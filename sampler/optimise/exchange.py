@@ -2,7 +2,7 @@
 
 The score of a set is Σ_l v_l^ρ over its variance ratios, with ρ that rises: a smooth stand-in for the worst ratio that
 sees the others too. Each swap is scored for all candidates in one pass by the formulas of `variances.py`. What comes out
-is judged by `split.ratios` alone: no ridge, no watched subset.
+is judged by `ratios_after_loss` alone: no ridge, no watched subset.
 """
 
 from __future__ import annotations
@@ -14,6 +14,8 @@ from dataclasses import dataclass, field
 import numpy as np
 
 from sampler.optimise.blocks import Array, Split
+from sampler.optimise.lost import ratios_after_loss
+from sampler.optimise.lost_variances import LostVariances
 from sampler.optimise.pool import Choice, Indices, Mask, Pool, cost_step, first_best, pool
 from sampler.optimise.problem import SiteProblem
 from sampler.optimise.variances import Variances, inverted, powers
@@ -78,34 +80,37 @@ class Exchange:
                         for rows, block in zip(self.pool.rows, split.blocks, strict=True)]
             tight = np.argsort(-Variances(split, self.pool, self.watch).of(inverses), kind="stable")[:WATCHED // 2]
             self.watch = np.union1d(tight, np.arange(0, split.limits, split.limits // (WATCHED // 2)))
-        self.limits = Variances(split, self.pool, self.watch)
+        self.limits = self._scored()
 
     def ridge(self, share: float) -> float:
         """A share of the information that a set of average sites of this budget would give in the orthonormal basis."""
         return share * self.budget / max(self.pool.cost.mean(), 1e-300) / max(self.split.blocks[0].n, 1)
 
+    def _scored(self) -> Variances:
+        return (LostVariances if self.pool.lost else Variances)(self.split, self.pool, self.watch)
+
     def ratios(self, choice: Choice) -> Array:
         """Every limit's ratio; the worst one that is not watched is watched from now on."""
-        ratios = self.split.ratios(self.pool.index[choice.sites])
+        ratios = ratios_after_loss(self.split, self.pool.index[choice.sites], self.pool.lost)
         worst = int(ratios.argmax()) if len(ratios) else 0
         if len(ratios) > len(self.watch) and worst not in self.watch and ratios[worst] > ratios[self.watch].max():
             self.watch = np.append(self.watch, worst)
-            self.limits = Variances(self.split, self.pool, self.watch)
+            self.limits = self._scored()
         return ratios
 
     def watch_all(self) -> None:
         if len(self.watch) < self.split.limits:
             self.watch = np.arange(self.split.limits)
-            self.limits = Variances(self.split, self.pool, self.watch)
+            self.limits = self._scored()
 
-    def start(self) -> Choice | None:
-        """Required sites, and others drawn by weight while the budget allows and until the rules are served."""
+    def start(self, uniform: bool = False) -> Choice | None:
+        """Required sites, and others drawn by weight, or evenly, while the budget allows; None if the rules are not served."""
         choice = Choice(self.pool, np.flatnonzero(self.pool.required))
         while True:
             allowed = np.flatnonzero(choice.addable(self.budget))
             if not len(allowed):
                 return None if choice.missing or np.any(choice.counts > self.pool.upper) or not len(choice) else choice
-            choice.add(self._draw(allowed))
+            choice.add(int(self.rng.choice(allowed)) if uniform else self._draw(allowed))
 
     def _draw(self, sites: Indices) -> int:
         cumulative = np.cumsum(self.weights[sites])
@@ -191,8 +196,10 @@ class Exchange:
         if best is None:
             return None
         with np.errstate(over="ignore", invalid="ignore"):
+            self.limits = Variances(self.split, self.pool, self.watch)  # losses, if any, are looked at when it is nearly done
             for share in RIDGES:
                 self.descend(best, EXPONENTS[0], self.ridge(share))
+            self.limits = self._scored()
             best, least = self.improve(best)
             misses = 0
             while least > FEASIBLE and misses < patience and not self.clock.over():
@@ -211,13 +218,14 @@ def exchanges(split: Split, problem: SiteProblem, budget: float, *, weights: Arr
     if reduced_costs is not None:
         keep = reduced_costs < REDUCED_COST_CUTS[round_ % len(REDUCED_COST_CUTS)] * scale
     share = np.zeros(problem.n) if weights is None else np.maximum(weights, 0.0)
-    if np.count_nonzero(keep) > POOL_SIZE:
+    size = POOL_SIZE if not problem.lost else POOL_SIZE // 4
+    if np.count_nonzero(keep) > size:
         order = np.argsort(problem.key, kind="stable")
         order = order[keep[order]]
-        first = order[np.argsort(-share[order], kind="stable")[:POOL_SIZE // 4]]
+        first = order[np.argsort(-share[order], kind="stable")[:size // 4]]
         keep = np.zeros(problem.n, bool)
         keep[first[share[first] > 0]] = True
-        keep[rng.choice(order, POOL_SIZE - POOL_SIZE // 4, replace=False)] = True
+        keep[rng.choice(order, size - size // 4, replace=False)] = True
     source = pool(split, problem, np.flatnonzero(keep))
     likely = share[source.index]
     likely = likely / max(likely.sum(), np.finfo(float).tiny) * budget / scale + (0.05 if weights is not None else 1.0) \
@@ -252,7 +260,8 @@ def prune(split: Split, problem: SiteProblem, chosen: Indices) -> Indices:
     choice = Choice(source, source.places(chosen))
     while len(choice) > 1:
         options = np.flatnonzero(choice.droppable())
-        worst = np.array([split.ratios(source.index[np.delete(choice.sites, i)]).max(initial=0.0) for i in options])
+        worst = np.array([ratios_after_loss(split, source.index[np.delete(choice.sites, i)], source.lost).max(initial=0.0)
+                          for i in options])
         options, worst = options[worst <= FEASIBLE], worst[worst <= FEASIBLE]
         if not len(options):
             break

@@ -1,47 +1,63 @@
-"""D-optimal exchange: the most informative set of a given count, with or without limits.
+"""D-optimal exchange: the most informative set of a given cost, with or without limits.
 
-The pair of sites whose swap raises log det most is swapped until none does (Fedorov 1972), from many starts: at the fewest
-count few single swaps keep the limits, so that starts matter more than swaps.
+The pair of sites whose swap raises log det most is swapped until none does (Fedorov 1972). Where the climbs end depends on
+how many sites lie at each place of the continuous optimum, and no single swap mends that; so there are many short starts
+on the candidates that the continuous optimum hardly misses, and they end when the best value has come back often enough.
 """
 
 from __future__ import annotations
 
+from dataclasses import dataclass
+
 import numpy as np
 
 from sampler.optimise.blocks import Array, Split
-from sampler.optimise.determinant import Determinant, determinants, swap_gains, value
+from sampler.optimise.determinant import determinants, swap_gains, value
 from sampler.optimise.exchange import FEASIBLE, LAST_RIDGE, Clock, Exchange, Stop
+from sampler.optimise.log_det import log_det_bound
 from sampler.optimise.pool import Choice, Indices, pool
 from sampler.optimise.problem import SiteProblem
 
 SMALL_GAIN = 1e-9
 """Gains of log det below this are rounding."""
-POOL_SIZE = 2000
-CHUNK = 50_000
-MOST_STARTS = 200
+POOL_PER_SITE = 25
+LEAST_POOL, MOST_POOL = 200, 3000
+UNIFORM = 0.5
+"""Share of the starts that draw sites evenly; the others draw by the weights of the continuous optimum."""
+PATIENCE = 6
+"""Kicks without gain before a new start."""
+RETURNS = 5
+"""The search ends when this many starts have come to the best value."""
+STARTS = 400
 
 
 class Climb:
-    """The climb of log det in one exchange pool; `limited`: only to sets that meet every limit."""
+    """The climb of log det in one pool; `limited`: only to sets that meet every limit."""
 
     def __init__(self, exchange: Exchange, problem: SiteProblem, limited: bool) -> None:
-        self.exchange, self.limited = exchange, limited
-        self.terms: list[Determinant] = determinants(exchange.split, problem, exchange.pool.index)
-        if limited:
+        self.exchange, self.limited = exchange, limited and exchange.split.limits > 0
+        self.terms = determinants(exchange.split, problem, exchange.pool.index)
+        if self.limited:
             exchange.watch_all()
 
     def value(self, choice: Choice) -> float:
         return value(self.terms, choice.sites)
 
     def rise(self, choice: Choice) -> None:
-        """Swaps the best pair until no pair gains, in place."""
+        """Swaps the best pair until no pair gains, then adds what the budget still allows; in place."""
         exchange = self.exchange
         ridge = exchange.ridge(LAST_RIDGE)
         while not exchange.clock.over():
             inverses = [term.inverse(choice.sites, ridge) for term in self.terms]
-            gain = swap_gains(self.terms, inverses, choice.sites)
-            gain[~choice.swappable(exchange.budget)] = -np.inf
-            pair = self._within_limits(choice, inverses, gain) if self.limited else _best_pair(gain)
+            allowed = choice.addable(exchange.budget)
+            if allowed.any():
+                gain = sum((term.slope(inverse, slice(None)) for term, inverse in zip(self.terms, inverses, strict=True)),
+                           np.zeros(len(allowed)))
+                choice.add(int(np.argmax(np.where(allowed, gain / exchange.pool.cost, -np.inf))))
+                continue
+            gains = swap_gains(self.terms, inverses, choice.sites)
+            gains[~choice.swappable(exchange.budget)] = -np.inf
+            pair = self._within_limits(choice, inverses, gains) if self.limited else _best_pair(gains)
             if pair is None:
                 return
             choice.swap(*pair)
@@ -74,68 +90,120 @@ class Climb:
         sites[position] = site
         return bool(self.exchange.split.ratios(self.exchange.pool.index[sites]).max(initial=0.0) <= FEASIBLE)
 
+    def start(self, uniform: bool) -> Choice | None:
+        """A set on a peak of its own, and one that meets the limits if it must."""
+        choice = self.exchange.start(uniform)
+        return None if choice is None else self.to_peak(choice)
+
+    def to_peak(self, choice: Choice) -> Choice | None:
+        if self.limited:
+            with np.errstate(over="ignore", invalid="ignore"):
+                choice, worst = self.exchange.improve(choice)
+            if worst > FEASIBLE:
+                return None
+        self.rise(choice)
+        return choice
+
+    def wander(self, choice: Choice) -> Choice:
+        """Kicks and climbs from the best set so far until none helps."""
+        best, misses = self.value(choice), 0
+        while misses < PATIENCE and not self.exchange.clock.over():
+            other = self.to_peak(self.exchange.kick(choice))
+            misses += 1
+            if other is not None and self.value(other) > best + SMALL_GAIN:
+                choice, best, misses = other, self.value(other), 0
+        return choice
+
 
 def _best_pair(gain: Array) -> tuple[int, int] | None:
     best = gain.max(initial=-np.inf)
     if best <= SMALL_GAIN:
         return None
-    site, position = np.unravel_index(np.argmax(gain.ravel() >= best - SMALL_GAIN), gain.shape)
+    site, position = np.unravel_index(np.argmax(gain.ravel() >= best - SMALL_GAIN / 2), gain.shape)
     return int(position), int(site)
 
 
+@dataclass(slots=True)
+class _Best:
+    sites: Indices
+    value: float
+    returns: int = 0
+
+    def offer(self, sites: Indices, new: float) -> None:
+        if new > self.value + SMALL_GAIN:
+            self.sites, self.value, self.returns = sites, new, 0
+        self.returns += abs(new - self.value) <= SMALL_GAIN * max(1.0, abs(new))
+
+
 def most_informative(split: Split, problem: SiteProblem, chosen: Indices, *, rng: np.random.Generator,
-                     deadline: float = np.inf, stop: Stop | None = None, starts: int = MOST_STARTS) -> Indices:
+                     deadline: float = np.inf, stop: Stop | None = None, starts: int = STARTS) -> Indices:
     """A set that costs no more than `chosen`, meets the limits and rules, and has the greatest log det found.
 
     Never worse than `chosen`, which must meet limits and rules. Sorted indices.
     """
-    clock = Clock(deadline, stop)
     budget = float(problem.cost[chosen].sum())
-    best = np.sort(chosen)
-    climb = _climb(split, problem, best, budget, rng, clock)
-    choice = Choice(climb.exchange.pool, climb.exchange.pool.places(best))
-    best_value = climb.value(choice)
-    climb.rise(choice)
-    for round_ in range(starts):
-        if climb.value(choice) > best_value + SMALL_GAIN:
-            best, best_value = np.sort(climb.exchange.pool.index[choice.sites]), climb.value(choice)
-        if clock.over():
+    return _best_set(split, problem, budget, True, np.sort(chosen), rng, Clock(deadline, stop), starts)
+
+
+def d_optimal(split: Split, problem: SiteProblem, budget: float, *, rng: np.random.Generator, deadline: float = np.inf,
+              stop: Stop | None = None, starts: int = STARTS) -> Indices | None:
+    """The set of greatest log det found that costs at most `budget` (that many sites when costs are one) and keeps the
+    rules, whatever the limits; None when the rules admit no set that was found. Sorted indices.
+    """
+    found = _best_set(split, problem, budget, False, np.zeros(0, np.int64), rng, Clock(deadline, stop), starts)
+    return found if len(found) else None
+
+
+def _best_set(split: Split, problem: SiteProblem, budget: float, limited: bool, chosen: Indices,
+              rng: np.random.Generator, clock: Clock, starts: int) -> Indices:
+    peak = log_det_bound(split, problem, budget, limited=limited, deadline=clock.deadline)
+    climb = _climb(split, problem, budget, limited, chosen, peak.weights, peak.gains, rng, clock)
+    source = climb.exchange.pool
+    best = _Best(np.zeros(0, np.int64), -np.inf)
+    if len(chosen):
+        choice = Choice(source, source.places(chosen))
+        best = _Best(chosen, climb.value(choice))
+        climb.rise(choice)
+        best.offer(np.sort(source.index[choice.sites]), climb.value(choice))
+    for _ in range(starts):
+        if clock.over() or best.returns >= RETURNS:
             break
-        if round_ % 10 == 9:
-            climb = _climb(split, problem, best, budget, rng, clock)
-        current = Choice(climb.exchange.pool, climb.exchange.pool.places(best))
-        moved = climb.exchange.kick(current) if round_ % 2 else climb.exchange.attempt(patience=3)
-        if moved is None:
-            continue
-        with np.errstate(over="ignore", invalid="ignore"):
-            moved, worst = climb.exchange.improve(moved)
-        if worst > FEASIBLE:
-            continue
-        climb.rise(moved)
-        choice = moved
-    return best
+        start = climb.start(bool(rng.uniform() < UNIFORM))
+        if start is None and len(best.sites):
+            start = Choice(source, source.places(best.sites))
+        if start is not None:
+            choice = climb.wander(start)
+            best.offer(np.sort(source.index[choice.sites]), climb.value(choice))
+    return _finish(split, problem, budget, limited, best.sites, peak.weights, rng, clock) if len(best.sites) else best.sites
 
 
-def _climb(split: Split, problem: SiteProblem, chosen: Indices, budget: float, rng: np.random.Generator,
-           clock: Clock, limited: bool = True) -> Climb:
-    """A climb in a pool of the sites that are best to swap in for one of the chosen, and others at random."""
-    order = np.argsort(problem.key, kind="stable")
-    order = order[~problem.forbidden[order]]
-    keep = order
-    if len(order) > POOL_SIZE:
-        terms = determinants(split, problem)
+def _finish(split: Split, problem: SiteProblem, budget: float, limited: bool, chosen: Indices, weights: Array,
+            rng: np.random.Generator, clock: Clock) -> Indices:
+    """The climb's last steps with all candidates: in a pool of those that are best to swap in."""
+    terms = determinants(split, problem)
+    while not clock.over():
         ridge = LAST_RIDGE * len(chosen) / problem.n
-        gain = np.zeros(len(order))
-        inverses = [term.inverse(chosen, ridge) for term in terms]
-        for start in range(0, len(order), CHUNK):
-            part = order[start:start + CHUNK]
-            gain[start:start + CHUNK] = swap_gains(terms, inverses, chosen, part).max(axis=1)
-        keep = np.concatenate([chosen, order[np.argsort(-gain, kind="stable")[:POOL_SIZE // 2]],
-                               rng.choice(order, POOL_SIZE // 2, replace=False)])
-    source = pool(split, problem, keep)
-    return Climb(Exchange(split, source, budget, np.full(source.n, 1.0), rng, clock), problem, limited)
+        gains = swap_gains(terms, [term.inverse(chosen, ridge) for term in terms], chosen).max(axis=1)
+        climb = _climb(split, problem, budget, limited, chosen, weights, gains, rng, clock)
+        source = climb.exchange.pool
+        choice = Choice(source, source.places(chosen))
+        before = climb.value(choice)
+        climb.rise(choice)
+        if climb.value(choice) <= before + SMALL_GAIN:
+            break
+        chosen = np.sort(source.index[choice.sites])
+    return chosen
 
 
-def d_optimal(split: Split, problem: SiteProblem, count: float, *, rng: np.random.Generator, deadline: float = np.inf,
-              stop: Stop | None = None, starts: int = MOST_STARTS) -> Indices | None:
-    raise NotImplementedError
+def _climb(split: Split, problem: SiteProblem, budget: float, limited: bool, chosen: Indices, weights: Array, gains: Array,
+           rng: np.random.Generator, clock: Clock) -> Climb:
+    """A climb in a pool of the candidates of greatest gain, and of the chosen."""
+    size = int(np.clip(POOL_PER_SITE * budget / problem.cost.mean(), LEAST_POOL, MOST_POOL))
+    allowed = np.flatnonzero(~problem.forbidden)
+    keep = allowed[np.lexsort((problem.key[allowed], -gains[allowed]))[:size]]
+    for members, low in zip(problem.rules.members, problem.rules.lower, strict=True):
+        if low > 0:
+            keep = np.append(keep, members[np.argsort(-gains[members], kind="stable")[:size // 4]])
+    source = pool(split, problem, np.append(keep, chosen))
+    likely = np.maximum(weights[source.index], 0.0) + 0.05 * budget / max(len(source.index), 1)
+    return Climb(Exchange(split, source, budget, likely, rng, clock), problem, limited)

@@ -10,6 +10,7 @@ from scipy.sparse import csc_array, csr_array
 
 from sampler.optimise.blocks import Array, Split
 from sampler.optimise.problem import SiteProblem
+from sampler.optimise.spacing import conflicts
 
 Indices = NDArray[np.int64]
 Mask = NDArray[np.bool_]
@@ -23,7 +24,8 @@ TIE = 1e-9
 @dataclass(frozen=True, slots=True)
 class Pool:
     """Candidates in the order of their keys. `index` (n,) into the problem; `rows[b]` (n, m, q) of each block;
-    `members` (rules, n) 0/1, with `lower` and `upper` (rules,) on the number of chosen members."""
+    `members` (rules, n) 0/1, with `lower` and `upper` (rules,) on the number of chosen members. `conflicts` (n, n) 0/1 sparse:
+    sites that may not both be chosen, when there is a spacing. `lost`: how many chosen sites may be lost."""
 
     index: Indices
     rows: tuple[Array, ...]
@@ -33,6 +35,8 @@ class Pool:
     lower: Array
     upper: Array
     max_sites: int
+    conflicts: csr_array | None
+    lost: int
 
     @property
     def n(self) -> int:
@@ -41,7 +45,8 @@ class Pool:
     @property
     def plain(self) -> bool:
         """No rules, no required sites and equal costs: any site may take the place of any other."""
-        return not self.members.shape[0] and not self.required.any() and bool(np.all(self.cost == self.cost[:1]))
+        return not self.members.shape[0] and not self.required.any() and self.conflicts is None \
+            and bool(np.all(self.cost == self.cost[:1]))
 
     def places(self, chosen: Indices) -> Indices:
         """Where the chosen sites of the problem stand in the pool; all must be there."""
@@ -68,7 +73,9 @@ def pool(split: Split, problem: SiteProblem, keep: Indices | None = None) -> Poo
     members = csr_array((np.ones(len(columns)), columns, bounds), shape=(len(inside), len(index)))
     return Pool(index, tuple(np.ascontiguousarray(block.rows[index]) for block in split.blocks), problem.cost[index],
                 problem.required[index], members, np.asarray(rules.lower, float), np.asarray(rules.upper, float),
-                len(index) if problem.max_sites is None else min(problem.max_sites, len(index)))
+                len(index) if problem.max_sites is None else min(problem.max_sites, len(index)),
+                conflicts(problem.xy[index], problem.spacing) if problem.xy is not None and problem.spacing > 0 else None,
+                problem.lost)
 
 
 class Choice:
@@ -81,6 +88,7 @@ class Choice:
         self.inside[self.sites] = True
         self.by_site: csc_array = source.members.tocsc()
         self.counts = source.members @ self.inside.astype(float)
+        self.crowd = np.zeros(source.n) if source.conflicts is None else source.conflicts @ self.inside.astype(float)
 
     def __len__(self) -> int:
         return len(self.sites)
@@ -101,12 +109,14 @@ class Choice:
         self.sites = np.append(self.sites, site)
         self.inside[site] = True
         self.counts += self._rules_of(site)
+        self._crowd(site, 1.0)
 
     def drop(self, position: int) -> None:
         site = self.sites[position]
         self.sites = np.delete(self.sites, position)
         self.inside[site] = False
         self.counts -= self._rules_of(site)
+        self._crowd(int(site), -1.0)
 
     def swap(self, position: int, site: int) -> None:
         """`site` takes the place of the one at `position`."""
@@ -114,8 +124,15 @@ class Choice:
         self.inside[site] = True
         if len(self.counts):
             self.counts += self._rules_of(site) - self._rules_of(int(self.sites[position]))
+        self._crowd(int(self.sites[position]), -1.0)
+        self._crowd(site, 1.0)
         self.sites = self.sites.copy()
         self.sites[position] = site
+
+    def _crowd(self, site: int, change: float) -> None:
+        near = self.pool.conflicts
+        if near is not None:
+            self.crowd[near.indices[near.indptr[site]:near.indptr[site + 1]]] += change
 
     def _rules_of(self, site: int) -> Array:
         part = np.zeros(len(self.counts))
@@ -127,6 +144,8 @@ class Choice:
         if len(self) >= self.pool.max_sites:
             return np.zeros(self.pool.n, bool)
         allowed = ~self.inside & (self.pool.cost <= budget - self.cost + COST_TOLERANCE * abs(budget))
+        if self.pool.conflicts is not None:
+            allowed &= self.crowd == 0.0
         if len(self.counts):
             full = (self.counts >= self.pool.upper).astype(float)
             allowed &= ~((full @ self.pool.members) > 0)
@@ -153,6 +172,8 @@ class Choice:
         allowed &= ~source.required[self.sites]
         slack = budget - self.cost + COST_TOLERANCE * abs(budget)
         allowed &= source.cost[:, None] - source.cost[self.sites] <= slack
+        if source.conflicts is not None:
+            allowed &= self.crowd[:, None] <= source.conflicts[:, self.sites].toarray()
         if len(self.counts):
             chosen = self.by_site[:, self.sites]
             full, tight = self.counts >= source.upper, self.counts <= source.lower

@@ -29,6 +29,9 @@ class SiteProblem:
     limits on the standard uncertainty of each direction. `cost` (n,) positive, ones by default. `required`,
     `forbidden` (n,) bool. `key` (n,) strings that name the sites: ties are broken by key, so the order of the
     candidates never changes the answer. `interest` (p,) bool: terms whose information log det counts (default: all).
+    `lost`: every limit must hold after the loss of any so many (0, 1, 2) chosen sites. `xy` (n, 2) and `spacing`: sites
+    closer than `spacing` may not both be chosen; 0 for no such rule. A site that reads with probability q has its block
+    scaled by √q: the information that is expected of it.
     """
 
     blocks: Array
@@ -42,6 +45,9 @@ class SiteProblem:
     interest: NDArray[np.bool_]
     rules: CountRules = field(default_factory=CountRules)
     max_sites: int | None = None
+    lost: int = 0
+    xy: Array | None = None
+    spacing: float = 0.0
 
     @property
     def n(self) -> int:
@@ -56,7 +62,8 @@ def site_problem(blocks: Array, directions: Array, tau: Array, *, prior_precisio
                  cost: Array | None = None, required: NDArray[np.bool_] | None = None,
                  forbidden: NDArray[np.bool_] | None = None, key: NDArray[Any] | None = None,
                  interest: NDArray[np.bool_] | None = None, rules: CountRules | None = None,
-                 max_sites: int | None = None) -> SiteProblem:
+                 max_sites: int | None = None, lost: int = 0, xy: Array | None = None,
+                 spacing: float = 0.0) -> SiteProblem:
     """A `SiteProblem` with the defaults filled in; shapes as there. Without keys, sites are named by their position."""
     n, _, p = blocks.shape
     return SiteProblem(
@@ -67,7 +74,7 @@ def site_problem(blocks: Array, directions: Array, tau: Array, *, prior_precisio
         forbidden=np.zeros(n, bool) if forbidden is None else forbidden,
         key=np.arange(n) if key is None else key,
         interest=np.ones(p, bool) if interest is None else interest,
-        rules=CountRules() if rules is None else rules, max_sites=max_sites)
+        rules=CountRules() if rules is None else rules, max_sites=max_sites, lost=lost, xy=xy, spacing=spacing)
 
 
 @dataclass(frozen=True, slots=True)
