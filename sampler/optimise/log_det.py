@@ -31,7 +31,10 @@ from sampler.optimise.rows import separate
 from sampler.optimise.variances import information, inverted, weighted_information
 
 GAP = 1e-5
-"""The path is followed until its gap is below this."""
+FIRST_GAP, TIGHTENING = 1e-2, 10.0
+"""The path is followed until its gap is below this: at first loosely, on candidates that others will replace."""
+EVEN = 0.2
+IDLE = 0.05
 PENALTY = 100.0
 """First price of missing the limits by 1, per direction; grows tenfold while some excess is left."""
 EXCESS = 1e-6
@@ -102,29 +105,35 @@ class _Bounder:
         penalty = PENALTY * sum(block.q for block in self.split.blocks)
         free = ~self.problem.required & ~self.problem.forbidden
         columns = np.flatnonzero((weights > 0) & free)
+        tolerance = FIRST_GAP
         for _ in range(ROUNDS):
             if self.over():
                 break
             program = self._program(columns)
-            start = np.clip(weights[columns], 1e-3 * self.budget / self.problem.n, 0.99)
-            room = program.budget / max(float(program.cost @ start), float(np.finfo(float).tiny))
-            peak = climb_path(program, start * min(1.0, 0.99 * room), GAP, penalty, self.over)
+            peak = climb_path(program, self._inner(weights[columns], program), tolerance, penalty, self.over)
             weights = self.problem.required.astype(float)
             weights[columns] = peak.weights
             gains = self._bound(weights, peak.limit_duals, peak.rule_duals)
-            paying = np.setdiff1d(np.flatnonzero((gains > GAP / self.budget) & free), columns)
+            paying = np.setdiff1d(np.flatnonzero((gains > tolerance / self.budget) & free), columns)
             ratio = self._ratios(weights)
             missed = np.setdiff1d(np.flatnonzero(ratio > 1.0 + EXCESS), self.watch)
             lax = peak.excess > EXCESS * 100
-            if not len(paying) and not len(missed) and not lax:
+            if not len(paying) and not len(missed) and not lax and tolerance <= GAP:
                 break
+            tolerance = max(GAP, tolerance / TIGHTENING)
             if lax:
                 penalty *= 10.0
-            columns = columns[peak.weights > 1e-6 / len(columns)] if len(paying) else columns
+            columns = columns[(gains[columns] > -IDLE) | (peak.weights > IDLE)] if len(paying) else columns
             order = np.lexsort((self.problem.key[paying], -gains[paying]))
             columns = np.union1d(columns, paying[order[:MORE_COLUMNS]])
             self.watch = np.union1d(self.watch, missed[np.argsort(-ratio[missed], kind="stable")[:WATCHED]])
         return self.best
+
+    def _inner(self, weights: Array, program: Concave) -> Array:
+        """Strictly inner weights of the columns: towards even ones, and within the budget."""
+        even = min(0.5, program.budget / max(float(program.cost.sum()), float(np.finfo(float).tiny)))
+        inner = (1.0 - EVEN) * weights + EVEN * even
+        return np.minimum(inner, 0.99) * min(1.0, 0.99 * program.budget / float(program.cost @ inner))
 
     def _matrices(self, weights: Array) -> list[Array]:
         """P₀ + Σ wᵢBᵢᵀBᵢ of each term, with a ridge: any M₀ gives a valid tangent."""
