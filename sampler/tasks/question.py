@@ -28,6 +28,8 @@ Array = NDArray[np.float64]
 
 SEARCH_STEPS = 40
 """Raster steps along the longer side of a region for the rows that the search holds; what lies between is audited."""
+MOST_POINTS = 10_000
+"""Points of one region whose rows the search holds from the start."""
 MAP_STEPS = 100
 SMALLEST_SHARE = 1e-3
 """Where the fixed part of a displacement alone exceeds its limit, this share of the limit stands for "cannot be met"."""
@@ -128,8 +130,28 @@ def _shared(study: Study) -> SharedErrors:
 def limit_rows(study: Study, assumed: Assumed) -> Limits:
     """The study's limits as rows: one per limited term, two (dx, dy) per raster point of each region."""
     return stack([_term_rows(study, assumed, source, limit) if isinstance(limit, TermLimit)
-                  else region_rows(study, assumed, source, raster(study.layout, limit.region, limit.polygon_mm, SEARCH_STEPS))
+                  else region_rows(study, assumed, source, thinned(raster(study.layout, limit.region, limit.polygon_mm,
+                                                                          SEARCH_STEPS)))
                   for source, limit in enumerate(study.limits)])
+
+
+def thinned(points: RegionPoints, most: int = MOST_POINTS) -> RegionPoints:
+    """At most about `most` of a region's points, the outermost and one for each square of a lattice over them.
+
+    The search may hold fewer rows than the region has points: where its plan misses the limit in between, the audit finds
+    the place and the search goes on with it.
+    """
+    if len(points) <= most:
+        return points
+    xy = points.xy_mm
+    low, size = xy.min(axis=0), np.maximum(np.ptp(xy, axis=0), 1e-9)
+    side = int(np.sqrt(most))
+    square = np.minimum((xy - low) / size * side, side - 1).astype(np.int64) @ np.array([1, side])
+    _, first = np.unique(square, return_index=True)
+    angle = np.linspace(0, 2 * np.pi, 64, endpoint=False)
+    outermost = np.argmax(xy @ np.stack([np.cos(angle), np.sin(angle)]), axis=0)
+    rows = np.union1d(first, outermost)
+    return RegionPoints(xy[rows], {name: index[rows] for name, index in points.cell.items()})
 
 
 def _term_rows(study: Study, assumed: Assumed, source: int, limit: TermLimit) -> Limits:
