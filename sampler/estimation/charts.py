@@ -3,9 +3,11 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
+from scipy.special import chdtr
 
 from sampler.estimation.least_squares import chance_above
 
@@ -17,8 +19,9 @@ RANGE_OF_TWO = 1.1283791670955126
 
 @dataclass(frozen=True, slots=True)
 class Individuals:
-    """A chart of single values (Shewhart): `mean`, `sigma` from the mean moving range of neighbours, limits at mean ± 3 sigma, and which values
-    (P,) lie outside. A slow drift widens the values but hardly the moving range, so that it shows. NaN with fewer than two values."""
+    """A chart of single values (Shewhart): `mean`, `sigma` from the mean moving range of neighbours, limits at mean ± 3
+    sigma, and which values (P,) lie outside. A slow drift widens the values but hardly the moving range, so that it
+    shows. NaN with fewer than two values."""
 
     mean: float
     sigma: float
@@ -39,31 +42,34 @@ def individuals(values: Array) -> Individuals:
 
 @dataclass(frozen=True, slots=True)
 class Pooled:
-    """Chi-square of several panels together: `ratio` of the residuals' standard deviation to the assumed one, and the chance `p_value` of one at
-    least as large."""
+    """Chi-square of several panels together: `ratio` of the residuals' standard deviation to the assumed one, and the
+    chances of one at least as large, `p_value`, and at most as large, `p_below`."""
 
     panels: int
     ratio: float
     degrees_of_freedom: float
     p_value: float
+    p_below: float
 
 
-def pooled(chi_square: Array, degrees_of_freedom: Array, likeness: float) -> Pooled:
+def pooled(chi_square: Array, degrees_of_freedom: NDArray[Any], likeness: float) -> Pooled:
     """Panels (P,) together; `likeness` is the correlation of residuals at the same mark between panels.
 
-    Panels whose local distortion repeats tell the same thing twice: the sum of P squares with correlation r has the variance of
-    1 + (P − 1) r² times as many, so that the degrees of freedom shrink by that factor (Satterthwaite 1946).
+    Panels whose local distortion repeats tell the same thing twice: the sum of P squares with correlation r has the
+    variance of 1 + (P − 1) r² times as many, so that the degrees of freedom shrink by that factor (Satterthwaite 1946).
     """
     panels, dof = len(chi_square), float(degrees_of_freedom.sum())
     if dof <= 0:
-        return Pooled(panels, np.nan, 0.0, 1.0)
+        return Pooled(panels, np.nan, 0.0, 1.0, 1.0)
     effective = dof / (1 + (panels - 1) * likeness**2)
     mean_square = float(chi_square.sum()) / dof
-    return Pooled(panels, float(np.sqrt(mean_square)), effective, float(chance_above(np.array(mean_square * effective), effective)))
+    return Pooled(panels, float(np.sqrt(mean_square)), effective, float(chance_above(mean_square * effective, effective)),
+                  float(chdtr(effective, mean_square * effective)))
 
 
 def likeness(site: NDArray[np.int64], residual: Array) -> float:
-    """Correlation of standardised residuals (m, 2) at the same mark between panels, between 0 and 1; 0 for a single panel.
+    """Correlation of standardised residuals (m, 2) at the same mark between panels, between 0 and 1; 0 for a single
+    panel.
 
     From all pairs of panels of each mark: Σ r_i r_j over Σ r² of the marks with at least two.
     """

@@ -1,12 +1,14 @@
 """Weighted least squares by orthogonal factors, for many panels that share their marks at once.
 
-Rows are whitened: divided by the standard uncertainty of their reading, so that residuals have unit variance when the noise is
-as assumed. A term with a prior adds one row (its value over its standard deviation); nothing else is ever added.
+Rows are whitened: divided by the standard uncertainty of their reading, so that residuals have unit variance when the
+noise is as assumed. A term with a prior adds one row (its value over its standard deviation); nothing else is ever
+added.
 """
 
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -23,8 +25,8 @@ PART_TOLERANCE = 1e-7
 class Factored:
     """A design's QR factors with column scaling and pivoting: rows[:, order] / scale[order] = q r, cut to its rank.
 
-    `rows` (n, p) are the readings', `q` (n, rank) their part of the orthonormal factor and `q_prior` (m, rank) that of the m
-    prior rows, which belong to the terms `with_prior` (m,) of standard deviation `prior_sd` (m,).
+    `rows` (n, p) are the readings', `q` (n, rank) their part of the orthonormal factor and `q_prior` (m, rank) that of
+    the m prior rows, which belong to the terms `with_prior` (m,) of standard deviation `prior_sd` (m,).
     """
 
     rows: Array
@@ -51,7 +53,8 @@ class Factored:
         size = np.abs(np.diag(r))
         # Rounding of the factorisation itself (Golub & Van Loan 2013, sec. 5.5.8): below it a pivot carries nothing.
         rank = int((size > max(whole.shape) * np.finfo(float).eps).sum())
-        return cls(rows, q[:n, :rank], q[n:, :rank], r[:rank], order, scale, with_prior, sd)
+        q, r = q.astype(np.float64, copy=False), r.astype(np.float64, copy=False)
+        return cls(rows, q[:n, :rank], q[n:, :rank], r[:rank], np.asarray(order, np.int64), scale, with_prior, sd)
 
     @property
     def terms(self) -> int:
@@ -72,7 +75,8 @@ class Factored:
         return (self.q**2).sum(axis=1)
 
     def inseparable(self) -> list[list[int]]:
-        """Groups of terms that the readings cannot tell apart, one for each missing rank; a group of one has no effect."""
+        """Groups of terms that the readings cannot tell apart, one for each missing rank; a group of one has no effect.
+        """
         if self.rank == self.terms:
             return []
         relation = solve_triangular(self.r[:, :self.rank], self.r[:, self.rank:])
@@ -111,8 +115,8 @@ class Factored:
 
 @dataclass(frozen=True, slots=True)
 class Fit:
-    """Panels (g,) fitted on one design: `theta` (g, p), whitened `residual` (g, n), and `chi_square` (g,), the sum of their squares
-    and of the prior rows' squares."""
+    """Panels (g,) fitted on one design: `theta` (g, p), whitened `residual` (g, n), and `chi_square` (g,), the sum of
+    their squares and of the prior rows' squares."""
 
     theta: Array
     residual: Array
@@ -136,8 +140,8 @@ class Fit:
     def studentised(self) -> tuple[Array, Array]:
         """Internally and externally studentised residuals (g, n), with the noise taken from the residuals themselves.
 
-        External: the residual against a fit without that reading (Cook & Weisberg 1982, sec. 2.2). NaN at leverage 1 or without
-        degrees of freedom.
+        External: the residual against a fit without that reading (Cook & Weisberg 1982, sec. 2.2). NaN at leverage 1 or
+        without degrees of freedom.
         """
         dof = self.design.degrees_of_freedom
         with np.errstate(invalid="ignore", divide="ignore"):
@@ -152,7 +156,7 @@ class Fit:
         return internal**2 * (leverage / _root_of_rest(leverage) ** 2) / self.design.rank
 
 
-def chance_above(chi_square: Array, degrees_of_freedom: Array | int) -> Array:
+def chance_above(chi_square: Array | float, degrees_of_freedom: NDArray[Any] | float) -> Array:
     """Upper tail of chi-square; 1 without degrees of freedom."""
     dof = np.asarray(degrees_of_freedom, float)
     return np.where(dof > 0, chdtrc(np.maximum(dof, 1e-9), chi_square), 1.0)

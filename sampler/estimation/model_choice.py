@@ -1,12 +1,13 @@
 """Which model the panels call for: a ladder of models, judged on readings that they were not fitted to.
 
-Everything follows from small matrices of products of [panel and shared terms | cell terms | reading], summed over each cell and quarter
-of a cell: a model is a choice of columns, leaving readings out is a subtraction, terms of single cells drop out cell by cell.
+Everything follows from small matrices of products of [panel and shared terms | cell terms | reading], summed over each
+cell and quarter of a cell: a model is a choice of columns, leaving readings out is a subtraction, terms of single cells
+drop out cell by cell.
 """
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
@@ -19,6 +20,7 @@ from sampler.panel.layout import Layout
 
 Array = NDArray[np.float64]
 Codes = NDArray[np.int64]
+Key = tuple[str, bool, bool]  # family, shared terms, single cells' terms
 
 LADDER = {"similarity": ("similarity",), "affine": ("affine",), "trapezoid": ("affine", "trapezoid"), "order2": ("order2",),
           "order3": ("order3",)}
@@ -38,11 +40,12 @@ RANK_TOLERANCE = 1e-9
 class Rung:
     """One model tried: a family of panel terms, and whether the grid's shared terms and its single cells' are with it.
 
-    `terms` of it one panel determines on average. `residual_um`: standard deviation of what it leaves, dx and dy. `cells_um`,
-    `quarters_um`: root mean square error at readings left out, whole cells at a time or a quarter of every cell at a time (NaN
-    where that says nothing). `above`, `above_se`: how far its mean square at cells left out lies above the best, as a share of the
-    best, and the standard error of that difference from cell to cell. `f`, `f_p`: F test against the rung below with the same cell
-    terms, NaN for the lowest. `aicc`: second-order Akaike criterion (Hurvich & Tsai 1989) less the smallest.
+    `terms` of it one panel determines on average. `residual_um`: standard deviation of what it leaves, dx and dy.
+    `cells_um`, `quarters_um`: root mean square error at readings left out, whole cells at a time or a quarter of every
+    cell at a time (NaN where that says nothing). `above`: how far its mean square at cells left out lies above the
+    best, as a share of the best; `best_se`: the standard error of the best's mean square from cell to cell, as the same
+    share. `f`, `f_p`: F test against the rung below with the same cell terms, NaN for the lowest. `aicc`: second-order
+    Akaike criterion (Hurvich & Tsai 1989) less the smallest.
     """
 
     family: str
@@ -53,7 +56,7 @@ class Rung:
     cells_um: float
     quarters_um: float
     above: float
-    above_se: float
+    best_se: float
     f: float
     f_p: float
     aicc: float
@@ -61,13 +64,14 @@ class Rung:
     @property
     def within_one(self) -> bool:
         """Whether it predicts cells as well as the best, up to one standard error (Breiman et al. 1984, sec. 3.4.3)."""
-        return bool(self.above <= self.above_se)
+        return bool(self.above <= self.best_se)
 
 
 @dataclass(frozen=True, slots=True)
 class ModelChoice:
-    """`ladders`: the rungs tried with each grid's terms, "" when the panel has no grid with enough cells. Recommended: `family` with the terms
-    of the grids `shared` and `each`; `reason` in words, one sentence each. `blocks`: what was left out at a time."""
+    """`ladders`: the rungs tried with each grid's terms, "" when the panel has no grid with enough cells. Recommended:
+    `family` with the terms of the grids `shared` and `each`; `reason` in words, one sentence each. `blocks`: what was
+    left out at a time."""
 
     ladders: dict[str, tuple[Rung, ...]]
     family: str
@@ -87,9 +91,16 @@ def panel_terms(family: str) -> tuple[str, ...]:
     return tuple(dict.fromkeys(name for part in LADDER[family] for name in FAMILIES[part]))
 
 
+def shared_terms(with_each: bool) -> tuple[str, ...]:
+    """The shared terms of a grid, with or without terms of each cell beside them."""
+    return tuple(name for name in SHARED if not (with_each and name in EACH))
+
+
 def model_of(family: str, layout: Layout, shared: tuple[str, ...] = (), each: tuple[str, ...] = ()) -> Model:
-    """A rung's panel terms with the shared and the single cells' terms of the given grids."""
-    terms = [ModelTerm(name) for name in panel_terms(family)] + [ModelTerm(name, grid) for grid in shared for name in SHARED]
+    """A rung's panel terms with the shared and the single cells' terms of the given grids; a term that each cell has is
+    not shared too."""
+    terms = [ModelTerm(name) for name in panel_terms(family)]
+    terms += [ModelTerm(name, grid) for grid in shared for name in shared_terms(grid in each)]
     for grid in (layout.grid(name) for name in each):
         terms += [ModelTerm(name, grid.name, cell, grid.cell_label(cell)) for cell in range(grid.cells) for name in EACH]
     return Model(tuple(terms))
@@ -99,11 +110,11 @@ def choose_model(layout: Layout, readings: Readings, averages: Averages, sigma_u
     """The smallest model that predicts left-out readings within one standard error of the best, and every model tried.
 
     `averages` without outliers; `sigma_um`: a first guess of the noise of dx and dy, which only weighs the two. Panel
-    terms and shared terms are judged with whole cells (or blocks of the panel) left out; terms of single cells with a quarter of
-    every cell left out, because nothing predicts the own terms of a cell that was never seen.
+    terms and shared terms are judged with whole cells (or blocks of the panel) left out; terms of single cells with a
+    quarter of every cell left out, because nothing predicts the own terms of a cell that was never seen.
     """
     located = places(layout, readings.sites.xy_mm).cell
-    grids = [grid.name for grid in layout.grids if len(np.unique(located[grid.name])) - (located[grid.name] < 0).any() >= LEAST_CELLS]
+    grids = [name for name, cell in located.items() if len(np.unique(cell[cell >= 0])) >= LEAST_CELLS]
     patterns = averages.patterns()
     ladders: dict[str, tuple[Rung, ...]] = {}
     shared: list[str] = []
@@ -121,9 +132,9 @@ def choose_model(layout: Layout, readings: Readings, averages: Averages, sigma_u
         elif chosen.shared:
             reason.append(f"terms that all cells of {grid} share predict left-out cells better")
         shared += [grid] * chosen.shared
-        without, own = (next((rung for rung in rungs if (rung.family, rung.shared, rung.each) == (family, chosen.shared, with_each)), None)
-                        for with_each in (False, True))
-        if without is not None and own is not None and own.quarters_um < without.quarters_um and _surely(tried, own, without):
+        same = [rung for rung in rungs if (rung.family, rung.shared) == (family, chosen.shared)]
+        if grid and _own_terms(layout, readings, patterns, sigma_um, tried, same[0]):
+            without, own = same
             each.append(grid)
             reason.append(f"terms of each cell of {grid} lower the error at left-out quarters of cells from "
                           f"{without.quarters_um:.3g} to {own.quarters_um:.3g} µm")
@@ -139,28 +150,45 @@ def _why(whole: list[Rung], chosen: Rung, best: Rung, blocks: str) -> str:
         more = f"{best.family} with shared cell terms" if best.shared else best.family
         text = (f"{name} is the smallest model within one standard error of the best at left-out {blocks} "
                 f"({chosen.cells_um:.3g} µm; {more}: {best.cells_um:.3g} µm)")
-    smaller = [rung for rung in whole if rung.terms < chosen.terms]
-    if smaller:
-        next_one = max(smaller, key=lambda rung: rung.terms)
-        text += f"; {next_one.family}{' with shared cell terms' if next_one.shared else ''} is worse ({next_one.cells_um:.3g} µm)"
+    below = [rung for rung in whole if rung.terms < chosen.terms and rung.shared == chosen.shared]
+    if below:
+        text += f"; {below[-1].family}{' with shared cell terms' if chosen.shared else ''} is worse ({below[-1].cells_um:.3g} µm)"
     return text
 
 
 class _Tried(list[Rung]):
-    """The rungs with their squared errors at left-out quarters, cell by cell."""
+    """The rungs with one `grid`, and their squared errors at left-out quarters, cell by cell."""
 
+    grid: str
     quarters: dict[tuple[str, bool, bool], Array]
 
+    def gain(self, without: Rung) -> tuple[float, float]:
+        """The share of the squared error at left-out quarters that single cells' terms take away, and its standard
+        error."""
+        before = self.quarters[(without.family, without.shared, False)]
+        fall = before - self.quarters[(without.family, without.shared, True)]
+        return float(fall.sum() / before.sum()), float(np.sqrt(len(fall)) * fall.std(ddof=1) / before.sum())
 
-def _surely(tried: _Tried, own: Rung, without: Rung) -> bool:
-    """Whether the gain of single cells' terms passes one standard error from cell to cell."""
-    gain = (tried.quarters[(own.family, own.shared, False)] - tried.quarters[(own.family, own.shared, True)])
-    return bool(gain.sum() > np.sqrt(len(gain)) * gain.std(ddof=1))
+
+def _own_terms(layout: Layout, readings: Readings, patterns: list[Pattern], sigma_um: tuple[float, float], tried: _Tried,
+               without: Rung) -> bool:
+    """Whether terms of single cells predict left-out quarters better, by more than one standard error from cell to
+    cell, while those of cells drawn half a pitch beside the real ones do not: smooth local distortion favours any
+    cells, steps between real cells spoil the others."""
+    gain, error = tried.gain(without)
+    if gain <= error:
+        return False
+    grid = layout.grid(tried.grid)
+    centre = (grid.centre_mm[0] + grid.pitch_mm[0] / 2, grid.centre_mm[1] + grid.pitch_mm[1] / 2)
+    moved = replace(layout, grids=tuple(replace(grid, centre_mm=centre) if other is grid else other for other in layout.grids))
+    beside, _ = _tried(moved, readings, patterns, np.asarray(sigma_um), tried.grid, (without.family,)).gain(without)
+    return beside < 0
 
 
 @dataclass(frozen=True, slots=True)
 class _Products:
-    """Of one pattern: `zz` (cells, quarters, 2, d, d), `zy` (cells, quarters, 2, d, g), `yy` (cells, quarters, 2, g), `n` (cells, quarters, 2)."""
+    """Of one pattern: `zz` (cells, quarters, 2, d, d), `zy` (cells, quarters, 2, d, g), `yy` (cells, quarters, 2, g),
+    `n` (cells, quarters, 2)."""
 
     zz: Array
     zy: Array
@@ -188,11 +216,13 @@ class _Products:
 
     def errors(self, theta: Array) -> Array:
         """Squared errors (cells, quarters, 2, g) of terms (cells or 1, quarters or 1, d, g)."""
-        return self.yy - 2 * (self.zy * theta[:, :, None]).sum(axis=3) + (theta[:, :, None] * (self.zz @ theta[:, :, None])).sum(axis=3)
+        theta = theta[:, :, None]
+        return self.yy - 2 * (self.zy * theta).sum(axis=3) + (theta * (self.zz @ theta)).sum(axis=3)
 
 
 def _solve(zz: Array, zy: Array, whole: Array) -> tuple[Array, NDArray[np.int64]]:
-    """Least squares of (…, d, d) and (…, d, g), undetermined directions at zero: terms and rank. `whole` (d,): the diagonal that scales."""
+    """Least squares of (…, d, d) and (…, d, g), undetermined directions at zero: terms and rank. `whole` (d,): the
+    diagonal that scales."""
     scale = np.sqrt(np.where(whole > 0, whole, 1.0))
     values, vectors = np.linalg.eigh(zz / (scale[:, None] * scale))
     known = values > RANK_TOLERANCE * np.maximum(values[..., -1:], 1e-300)
@@ -203,8 +233,8 @@ def _solve(zz: Array, zy: Array, whole: Array) -> tuple[Array, NDArray[np.int64]
 
 
 def _fit(zz: Array, zy: Array, panel: Codes, own: Codes) -> tuple[Array, Array, float]:
-    """Terms from the products of each cell, (cells, d, d) and (cells, d, g): panel and shared terms (d, g) in place, own terms
-    (cells, d, g) in place, and how many are determined."""
+    """Terms from the products of each cell, (cells, d, d) and (cells, d, g): panel and shared terms (d, g) in place,
+    own terms (cells, d, g) in place, and how many are determined."""
     d, g = zy.shape[1:]
     total, moment = zz.sum(axis=0), zy.sum(axis=0)
     theta, alone = np.zeros((d, g)), np.zeros((len(zz), d, g))
@@ -225,9 +255,10 @@ def _fit(zz: Array, zy: Array, panel: Codes, own: Codes) -> tuple[Array, Array, 
     return theta, alone, rank + float(found)
 
 
-def _tried(layout: Layout, readings: Readings, patterns: list[Pattern], sigma: Array, grid: str) -> _Tried:
+def _tried(layout: Layout, readings: Readings, patterns: list[Pattern], sigma: Array, grid: str,
+           families: tuple[str, ...] = tuple(LADDER)) -> _Tried:
     """Every rung with and without the shared and single cells' terms of one grid ("" for none)."""
-    names = list(dict.fromkeys(name for family in LADDER for name in panel_terms(family)))
+    names = list(dict.fromkeys(name for family in families for name in panel_terms(family)))
     terms = [ModelTerm(name) for name in names]
     if grid:
         terms += [ModelTerm(name, grid) for name in (*SHARED, *EACH)]
@@ -236,7 +267,7 @@ def _tried(layout: Layout, readings: Readings, patterns: list[Pattern], sigma: A
     own = np.arange(len(names) + len(SHARED), len(terms))
     cell, quarter, cells = _cells(layout, at.xy_mm, at.cell.get(grid), at.local_mm.get(grid))
     variants = [(False, False)] + ([(True, False), (False, True), (True, True)] if grid else [])
-    keys = [(family, shared, each) for shared, each in variants for family in LADDER]
+    keys = [(family, shared, each) for shared, each in variants for family in families]
     left = {key: np.zeros((cells, 2)) for key in keys}  # squared errors at left-out cells, quarters
     squares = {key: np.zeros(2) for key in keys}
     rank = dict.fromkeys(keys, 0.0)
@@ -258,7 +289,9 @@ def _tried(layout: Layout, readings: Readings, patterns: list[Pattern], sigma: A
                 left[key][:, 0] += _left_cells(products, zz.sum(axis=1), zy.sum(axis=1), columns)
             if grid:
                 left[key][:, 1] += _left_quarters(products, zz, zy, columns, alone)
-    return _rungs(keys, left, squares, rank, n, panels, sigma)
+    tried = _rungs(keys, left, squares, rank, n, panels, sigma)
+    tried.grid = grid
+    return tried
 
 
 def _left_cells(products: _Products, zz: Array, zy: Array, columns: Codes) -> Array:
@@ -271,7 +304,8 @@ def _left_cells(products: _Products, zz: Array, zy: Array, columns: Codes) -> Ar
 
 
 def _left_quarters(products: _Products, zz: Array, zy: Array, columns: Codes, own: Codes) -> Array:
-    """Squared errors of each cell when one of its quarters, and that of every other cell, is left out at a time, (cells,)."""
+    """Squared errors of each cell when one of its quarters, and that of every other cell, is left out at a time,
+    (cells,)."""
     total = np.zeros(len(zz))
     for quarter in range(QUARTERS):
         theta, single, _ = _fit(zz.sum(axis=1) - zz[:, quarter], zy.sum(axis=1) - zy[:, quarter], columns, own)
@@ -279,7 +313,8 @@ def _left_quarters(products: _Products, zz: Array, zy: Array, columns: Codes, ow
     return total
 
 
-def _rungs(keys: list[tuple[str, bool, bool]], left: dict, squares: dict, rank: dict, n: Array, panels: int, sigma: Array) -> _Tried:
+def _rungs(keys: list[Key], left: dict[Key, Array], squares: dict[Key, Array], rank: dict[Key, float], n: Array, panels: int,
+           sigma: Array) -> _Tried:
     readings = n.sum()
     unit = float(np.sqrt((sigma**2).mean()))
     used = n.sum(axis=1) > 0
@@ -290,8 +325,10 @@ def _rungs(keys: list[tuple[str, bool, bool]], left: dict, squares: dict, rank: 
     for key in keys:
         k = rank[key] + 1
         rest = readings - k - 1
-        criterion[key] = (readings * np.log(max(squares[key].sum(), 1e-300) / readings) + 2 * k * readings / rest) if rest > 0 else np.inf
+        deviance = readings * np.log(max(squares[key].sum(), 1e-300) / readings)
+        criterion[key] = deviance + 2 * k * readings / rest if rest > 0 else np.inf
     floor = min(criterion.values())
+    best_se = float(np.sqrt(used.sum()) * least[used].std(ddof=1) / max(least.sum(), 1e-300)) if used.sum() > 1 else np.inf
     tried = _Tried()
     tried.quarters = {key: left[key][used, 1] for key in keys}
     for key in keys:
@@ -301,25 +338,25 @@ def _rungs(keys: list[tuple[str, bool, bool]], left: dict, squares: dict, rank: 
         residual = sigma * np.sqrt(np.divide(squares[key], dof * share, out=np.full(2, np.nan), where=dof * share > 0))
         order = list(LADDER).index(family)
         f = f_p = np.nan
-        if order and dof > 0:
-            below = (list(LADDER)[order - 1], shared, each)
+        below = (list(LADDER)[order - 1], shared, each)
+        if order and below in rank and dof > 0:
             more = rank[key] - rank[below]
             if more > 0:
                 f = float((squares[below].sum() - squares[key].sum()) / more / (squares[key].sum() / dof))
                 f_p = float(fdtrc(more, dof, max(f, 0.0)))
         excess = (left[key][:, 0] - least)[used]
         error = np.sqrt(left[key].sum(axis=0) / [readings, max(n[:-1].sum(), 1.0)]) * unit
-        above_se = float(np.sqrt(len(excess)) * excess.std(ddof=1) / max(least.sum(), 1e-300)) if len(excess) > 1 else np.inf
         tried.append(Rung(family, shared, each, rank[key] / max(panels, 1), (float(residual[0]), float(residual[1])),
                           np.nan if each else float(error[0]), float(error[1]) if tried.quarters[key].any() else np.nan,
-                          np.inf if each else float(excess.sum() / max(least.sum(), 1e-300)), above_se, f, f_p,
+                          np.inf if each else float(excess.sum() / max(least.sum(), 1e-300)), best_se, f, f_p,
                           float(criterion[key] - floor)))
     return tried
 
 
 def _cells(layout: Layout, xy_mm: Array, cell: Codes | None, local_mm: Array | None) -> tuple[Codes, Codes, int]:
-    """The cell and the quarter of a cell of each place, (n,) each, and the number of cells. Places outside all cells are one more cell, and
-    in a fifth quarter that is never left out: nothing but them tells single cells' terms from the panel's."""
+    """The cell and the quarter of a cell of each place, (n,) each, and the number of cells. Places outside all cells
+    are one more cell, and in a fifth quarter that is never left out: nothing but them tells single cells' terms from
+    the panel's."""
     if cell is None or local_mm is None:
         low, span = xy_mm.min(axis=0), np.maximum(np.ptp(xy_mm, axis=0), 1e-9)
         step = np.minimum((BLOCKS * (xy_mm - low) / span).astype(np.int64), BLOCKS - 1)

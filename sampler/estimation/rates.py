@@ -39,7 +39,8 @@ def read_rates(readings: Readings) -> tuple[ReadRate, ...]:
     of = code[readings.site]
     tried = np.bincount(of, minlength=len(kinds))
     read = np.bincount(of, ~readings.lost, minlength=len(kinds)).astype(int)
-    return tuple(ReadRate(str(kind), int(r), int(t), wilson(int(r), int(t))) for kind, r, t in zip(kinds, read, tried, strict=True))
+    return tuple(ReadRate(str(kind), r, t, wilson(r, t))
+                 for kind, r, t in zip(kinds, read.tolist(), tried.tolist(), strict=True))
 
 
 def often_lost(readings: Readings, least: int = 2) -> tuple[tuple[str, int, int], ...]:

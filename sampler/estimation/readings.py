@@ -1,4 +1,5 @@
-"""What was measured: displacements of marks on panels, checked against the layout and grouped by what each panel read."""
+"""What was measured: displacements of marks on panels, checked against the layout and grouped by what each panel read.
+"""
 
 from __future__ import annotations
 
@@ -17,7 +18,8 @@ Array = NDArray[np.float64]
 Codes = NDArray[np.int64]
 
 MATCH_MM = 0.01
-"""A reading this near to a drawn mark is of that mark: far above the rounding of files, far below any distance of marks."""
+"""A reading this near to a drawn mark is of that mark: far above the rounding of files, far below any distance of
+marks."""
 MOVED_MM = 0.1
 """Coordinates given beside an id that lie further than this from the drawn mark are doubted in a warning."""
 NAMED = 5
@@ -28,10 +30,10 @@ NAMED = 5
 class Readings:
     """Readings as columns, one row each: row i is of mark `sites[site[i]]` on panel `panel_names[panel[i]]`.
 
-    `dxy_um` (n, 2) is NaN where a reading was lost. Panels stand in order of their first row, which is taken as their order in
-    time; `lot` (panels,) points into `lot_names`, one unnamed lot when no lot was given. `repeat` (n,) points into
-    `repeat_names`; rows of one panel and mark are repeats of each other with or without it. `sites` are the distinct marks
-    that have a row. `warnings`: what was left out or looks doubtful, one sentence each.
+    `dxy_um` (n, 2) is NaN where a reading was lost. Panels stand in order of their first row, which is taken as their
+    order in time; `lot` (panels,) points into `lot_names`, one unnamed lot when no lot was given. `repeat` (n,) points
+    into `repeat_names`; rows of one panel and mark are repeats of each other with or without it. `sites` are the
+    distinct marks that have a row. `warnings`: what was left out or looks doubtful, one sentence each.
     """
 
     sites: Sites
@@ -59,7 +61,7 @@ class Readings:
     @property
     def lost(self) -> NDArray[np.bool_]:
         """Rows of which either axis was not read, (n,)."""
-        return np.isnan(self.dxy_um).any(axis=1)
+        return np.asarray(np.isnan(self.dxy_um).any(axis=1))
 
     @classmethod
     def of(cls, layout: Layout, panel: Sequence[Any] | NDArray, dxy_um: Array, *, id: Sequence[Any] | NDArray | None = None,
@@ -68,8 +70,9 @@ class Readings:
            kind: Sequence[Any] | NDArray | None = None, where: str = "readings") -> Self:
         """Readings from columns of n rows; marks by `id`, or by `xy_mm` (n, 2) in the centred panel frame.
 
-        Rows of ids that the layout does not have, or of places off the panel, are left out and named in `warnings`. A place
-        where no mark is drawn is used as it is. Raises InputError, all faults together, when nothing can be made of them.
+        Rows of ids that the layout does not have, or of places off the panel, are left out and named in `warnings`. A
+        place where no mark is drawn is used as it is. Raises InputError, all faults together, when nothing can be made
+        of them.
         """
         n = len(panel)
         dxy = np.array(dxy_um, float).reshape(-1, 2)
@@ -101,8 +104,8 @@ class Readings:
         first[panel_code[::-1]] = lot_code[::-1]
         torn = np.unique(panel_code[lot_code != first[panel_code]])
         if len(torn):
-            raise InputError(f"{where}: panel {_named([panel_names[i] for i in torn])} {'is' if len(torn) == 1 else 'are'} in more "
-                             "than one lot; give panels of different lots different names")
+            raise InputError(f"{where}: in more than one lot: panel {_named([panel_names[i] for i in torn])}; give panels of "
+                             "different lots different names")
         repeat_code, repeat_names = (np.zeros(n, np.int64), ("",)) if repeat is None else _coded(repeat)
         used, place = np.unique(site[keep], return_inverse=True)
         has = np.unique(panel_code[keep])
@@ -127,8 +130,8 @@ class Readings:
 
 @dataclass(frozen=True, slots=True)
 class Averages:
-    """One row for each panel and mark, by panel: the mean of its repeats `dxy_um` (m, 2), NaN where none was read, their number
-    `count` (m, 2), and the sum of their squared distances from the mean, `within_um2` (m, 2)."""
+    """One row for each panel and mark, by panel: the mean of its repeats `dxy_um` (m, 2), NaN where none was read,
+    their number `count` (m, 2), and the sum of their squared distances from the mean, `within_um2` (m, 2)."""
 
     panel: Codes
     site: Codes
@@ -146,8 +149,8 @@ class Averages:
                         np.where(flagged, 0.0, self.within_um2), self.panels)
 
     def patterns(self) -> list[Pattern]:
-        """Panels grouped by the marks that they read and how often, in order of their first panel; a panel that read nothing is
-        in none."""
+        """Panels grouped by the marks that they read and how often, in order of their first panel; a panel that read
+        nothing is in none."""
         bounds = np.searchsorted(self.panel, np.arange(self.panels + 1))
         groups: dict[bytes, list[tuple[int, NDArray[np.int64]]]] = {}
         for panel in range(self.panels):
@@ -166,8 +169,8 @@ class Averages:
 
 @dataclass(frozen=True, slots=True)
 class Pattern:
-    """Panels (g,) that read the same marks `site` (k,) equally often `count` (k, 2): `dxy_um` (g, k, 2), rows of the averages
-    `rows` (g, k). Vectors over its readings run over `seen`, mark by mark, dx before dy."""
+    """Panels (g,) that read the same marks `site` (k,) equally often `count` (k, 2): `dxy_um` (g, k, 2), rows of the
+    averages `rows` (g, k). Vectors over its readings run over `seen`, mark by mark, dx before dy."""
 
     panels: Codes
     site: Codes
@@ -251,8 +254,8 @@ def _by_place(layout: Layout, xy_mm: Array, side: Sequence[Any] | NDArray | None
     if not on.all():
         off = np.flatnonzero(~on)
         places = [f"({x:g}, {y:g})" for x, y in xy_mm[off[:NAMED]].tolist()]
-        warnings.append(f"{where}: {_named(places)} {'lies' if len(off) == 1 else 'lie'} off the panel, {_rows(len(off))} left out; "
-                        "are the coordinates in mm and from the layout's origin?")
+        warnings.append(f"{where}: off the panel: {_named(places)}; {_rows(len(off))} left out; are the coordinates in mm and "
+                        "from the layout's origin?")
     undrawn = np.flatnonzero(on & (site < 0))
     if not len(undrawn):
         return marks, site

@@ -1,6 +1,7 @@
 """Robust fits: M-estimates by reweighting, and readings that do not belong to the rest.
 
-The design is given by an orthonormal basis q (n, r) of its columns, so the weighted normal equations stay well conditioned.
+The design is given by an orthonormal basis q (n, r) of its columns, so the weighted normal equations stay well
+conditioned.
 """
 
 from __future__ import annotations
@@ -38,8 +39,8 @@ def m_estimate(q: Array, y: Array, bisquare: bool = False, group: NDArray[np.int
                start: Array | None = None) -> MEstimate:
     """Huber's, or the bisquare, M-estimate of each row of y (g, n) by iteratively reweighted least squares.
 
-    The scale is 1.4826 times the median absolute residual, renewed at every step, apart for each `group` (n,) of readings.
-    `start` (g, r) defaults to least squares; the bisquare wants a robust one.
+    The scale is 1.4826 times the median absolute residual, renewed at every step, apart for each `group` (n,) of
+    readings. `start` (g, r) defaults to least squares; the bisquare wants a robust one.
     """
     group = np.zeros(len(q), np.int64) if group is None else group
     members = [np.flatnonzero(group == label) for label in range(int(group.max()) + 1)]
@@ -83,8 +84,8 @@ def weighted(q: Array, y: Array, weight: Array) -> Array:
 
 @dataclass(frozen=True, slots=True)
 class Outliers:
-    """`flagged` (g, n); `studentised` (g, n): the residual of each reading against a fit to all good readings but itself, over its
-    standard deviation; `sigma` (g, groups) of the good ones."""
+    """`flagged` (g, n); `studentised` (g, n): the residual of each reading against a fit to all good readings but
+    itself, over its standard deviation; `sigma` (g, groups) of the good ones."""
 
     flagged: NDArray[np.bool_]
     studentised: Array
@@ -94,8 +95,8 @@ class Outliers:
 def outliers(q: Array, y: Array, group: NDArray[np.int64] | None = None) -> Outliers:
     """Readings that do not belong: Huber then bisquare, then least squares on the rest until the flags stay.
 
-    A reading is flagged when its externally studentised residual passes Student's t at FLAG_CHANCE, Bonferroni over the n readings.
-    Its noise is that of its `group` (n,).
+    A reading is flagged when its externally studentised residual passes Student's t at FLAG_CHANCE, Bonferroni over the
+    n readings. Its noise is that of its `group` (n,).
     """
     group = np.zeros(len(q), np.int64) if group is None else group
     n, rank = q.shape
@@ -122,8 +123,8 @@ def outliers(q: Array, y: Array, group: NDArray[np.int64] | None = None) -> Outl
 
 def _deleted(q: Array, y: Array, group: NDArray[np.int64], groups: int,
              flagged: NDArray[np.bool_]) -> tuple[Array, Array, Array]:
-    """Externally studentised residuals (g, n) against the fit to readings not flagged, and its sigma with its degrees of freedom,
-    both (g, groups)."""
+    """Externally studentised residuals (g, n) against the fit to readings not flagged, and its sigma with its degrees
+    of freedom, both (g, groups)."""
     studentised, sigma, freedom = np.empty_like(y), np.empty((len(y), groups)), np.empty((len(y), groups))
     tiny = 1e-14 * np.abs(y).max(axis=1, keepdims=True) + 1e-300
     for part in _parts(len(y), q.size):

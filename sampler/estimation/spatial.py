@@ -1,13 +1,15 @@
 """Whether what a model leaves at a mark resembles what it leaves nearby: Moran's I, variogram, range.
 
-Correlation functions of distance d: `smooth` exp(−d² / 2 range²), which is that of the planner's local field, and `rough`
-exp(−d / range). One axis at a time. A fit takes part of a correlated field away and makes its residuals negatively correlated far apart;
-the variogram is therefore fitted through the fit: with M = I − qqᵀ the residuals' covariance is M (sill R + nugget I) M, so
-that the expected value of every bin is linear in sill and nugget and nothing is biased.
+Correlation functions of distance d: `smooth` exp(−d² / 2 range²), which is that of the planner's local field, and
+`rough` exp(−d / range). One axis at a time. A fit takes part of a correlated field away and makes its residuals
+negatively correlated far apart; the variogram is therefore fitted through the fit: with M = I − qqᵀ the residuals'
+covariance is M (sill R + nugget I) M, so that the expected value of every bin is linear in sill and nugget and nothing
+is biased.
 """
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass
 
 import numpy as np
@@ -18,13 +20,18 @@ from scipy.spatial.distance import cdist
 
 Array = NDArray[np.float64]
 
-FAMILIES = {"smooth": lambda d, reach: np.exp(-(d**2) / (2 * reach**2)), "rough": lambda d, reach: np.exp(-d / reach)}
+Correlation = Callable[[Array, float], Array]
+
+FAMILIES: dict[str, Correlation] = {"smooth": lambda d, reach: np.exp(-(d**2) / (2 * reach**2)),
+                                    "rough": lambda d, reach: np.exp(-d / reach)}
 MOST_MARKS = 700
-"""Marks of one field that take part; of more, half are spread at random and half stand in close groups, for short distances."""
+"""Marks of one field that take part; of more, half are spread at random and half stand in close groups, for short
+distances."""
 GROUP = 12
 BINS = 24
 RANGES = 36
-"""Ranges tried, equally spaced in logarithm from half the closest distance to the largest; the best is refined between them."""
+"""Ranges tried, equally spaced in logarithm from half the closest distance to the largest; the best is refined between
+them."""
 NEIGHBOURS = 8
 PERMUTATIONS = 999
 SIMULATIONS = 200
@@ -33,8 +40,8 @@ LEVEL = 0.95
 
 @dataclass(frozen=True, slots=True)
 class Field:
-    """Residuals of one axis on panels that read the same marks: `xy_mm` (n, 2), orthonormal basis `q` (n, r) of what was fitted,
-    `residual` (g, n), one row for each panel."""
+    """Residuals of one axis on panels that read the same marks: `xy_mm` (n, 2), orthonormal basis `q` (n, r) of what
+    was fitted, `residual` (g, n), one row for each panel."""
 
     xy_mm: Array
     q: Array
@@ -57,13 +64,21 @@ class Field:
         return once - (once @ self.q) @ self.q.T
 
 
+    def worth(self, fit: VariogramFit) -> float:
+        """Effective degrees of freedom of the mean square under a fit, tr(K)² / tr(K²) for each panel (Satterthwaite
+        1946)."""
+        d = cdist(self.xy_mm, self.xy_mm)
+        covariance = self.left(fit.sill_um2 * FAMILIES[fit.family](d, fit.range_mm) + fit.nugget_um2 * np.eye(len(d)))
+        return len(self.residual) * float(np.trace(covariance) ** 2 / (covariance**2).sum())
+
+
 def thinned(xy_mm: Array, rng: np.random.Generator, most: int = MOST_MARKS) -> NDArray[np.int64]:
     """At most about `most` of the points: half at random, half in close groups."""
     if len(xy_mm) <= most:
         return np.arange(len(xy_mm))
     spread = rng.choice(len(xy_mm), most // 2, replace=False)
     centres = rng.choice(len(xy_mm), most // 2 // GROUP, replace=False)
-    _, near = cKDTree(xy_mm).query(xy_mm[centres], GROUP)
+    near = np.asarray(cKDTree(xy_mm).query(xy_mm[centres], GROUP)[1])
     return np.unique(np.r_[spread, near.ravel()])
 
 
@@ -80,7 +95,7 @@ def neighbour_weights(xy_mm: Array, count: int = NEIGHBOURS) -> csr_array:
     """Row-standardised weights of the `count` nearest other points, (n, n)."""
     n = len(xy_mm)
     count = min(count, n - 1)
-    _, near = cKDTree(xy_mm).query(xy_mm, count + 1)
+    near = np.asarray(cKDTree(xy_mm).query(xy_mm, count + 1)[1])
     rows = np.arange(n)[:, None]
     # Of points at one place the query may not list the point itself first, or at all.
     own = near == rows
@@ -115,7 +130,8 @@ def moran(fields: list[Field], rng: np.random.Generator, permutations: int = PER
 
 @dataclass(frozen=True, slots=True)
 class Variogram:
-    """Half the mean squared difference of pairs on the same panel, by bins of distance: `distance_mm`, `gamma_um2` and `pairs` (b,)."""
+    """Half the mean squared difference of pairs on the same panel, by bins of distance: `distance_mm`, `gamma_um2` and
+    `pairs` (b,)."""
 
     distance_mm: Array
     gamma_um2: Array
@@ -124,9 +140,10 @@ class Variogram:
 
 @dataclass(frozen=True, slots=True)
 class VariogramFit:
-    """nugget + sill (1 − correlation(d; range)), with 95 % intervals from simulated fields, refitted; `misfit` is the weighted sum of squares
-    over the bins. `curve_um2` (b,): what the fit expects of each bin, the loss by fitting included. A range at the end of the ranges that
-    the marks can show is `bounded` false: then the field is a slow bend, and sill and range are lower bounds."""
+    """nugget + sill (1 − correlation(d; range)), with 95 % intervals from simulated fields, refitted; `misfit` is the
+    weighted sum of squares over the bins. `curve_um2` (b,): what the fit expects of each bin, the loss by fitting
+    included. A range at the end of the ranges that the marks can show is `bounded` false: then the field is a slow
+    bend, and sill and range are lower bounds."""
 
     family: str
     nugget_um2: float
@@ -181,7 +198,8 @@ def _bins(fields: list[Field]) -> _Bins:
 
 
 def variogram(fields: list[Field]) -> Variogram:
-    """The pooled variogram of residuals, up to 0.6 of the diagonal; bins widen with distance, empty ones are left out."""
+    """The pooled variogram of residuals, up to 0.6 of the diagonal; bins widen with distance, empty ones are left out.
+    """
     bins = _bins(fields)
     return Variogram(bins.distance, bins.mean(_products(fields)), bins.pairs.astype(np.int64))
 
@@ -189,8 +207,8 @@ def variogram(fields: list[Field]) -> Variogram:
 def fit_variogram(fields: list[Field], rng: np.random.Generator, simulations: int = SIMULATIONS) -> tuple[VariogramFit, ...]:
     """Both families fitted to the pooled variogram, the better (smaller misfit) first.
 
-    Weighted least squares with weights pairs / expected² (Cressie 1985), twice reweighted; for each range the nugget and the
-    sill, not negative, follow linearly.
+    Weighted least squares with weights pairs / expected² (Cressie 1985), twice reweighted; for each range the nugget
+    and the sill, not negative, follow linearly.
     """
     bins = _bins(fields)
     observed = bins.mean(_products(fields))
@@ -206,22 +224,25 @@ def fit_variogram(fields: list[Field], rng: np.random.Generator, simulations: in
         reach = float(np.exp(np.interp(at, np.arange(RANGES), np.log(ranges))))
         drawn = _simulated(fields, distances, bins, float(n), float(s), correlation, reach, rng, simulations)
         n_sim, s_sim, at_sim, _, _ = _fit(drawn, bins.pairs, nugget, sill)
-        tails = [(1 - LEVEL) / 2, (1 + LEVEL) / 2]
-        intervals = [np.quantile(values, tails) for values in (n_sim, s_sim)]
         shown = at_sim[s_sim > 0.01 * (s_sim + n_sim)]
-        span = np.quantile(np.interp(shown, np.arange(RANGES), np.log(ranges)), tails) if len(shown) else np.log(ranges[[0, -1]])
+        reaches = np.exp(np.interp(shown, np.arange(RANGES), np.log(ranges)))
         found.append(VariogramFit(family, float(n), float(s), reach, float(misfit), curve, bool(at < RANGES - 1.5),
-                                  (float(intervals[0][0]), float(intervals[0][1])), (float(intervals[1][0]), float(intervals[1][1])),
-                                  (float(np.exp(span[0])), float(np.exp(span[1])))))
+                                  _middle(n_sim), _middle(s_sim),
+                                  _middle(reaches) if len(shown) else (float(ranges[0]), float(ranges[-1]))))
     return tuple(sorted(found, key=lambda fit: fit.misfit))
+
+
+def _middle(values: Array) -> tuple[float, float]:
+    low, high = np.quantile(values, [(1 - LEVEL) / 2, (1 + LEVEL) / 2])
+    return float(low), float(high)
 
 
 def _products(fields: list[Field]) -> list[Array]:
     return [field.residual.T @ field.residual / len(field.residual) for field in fields]
 
 
-def _simulated(fields: list[Field], distances: list[Array], bins: _Bins, nugget: float, sill: float, correlation, reach: float,  # noqa: ANN001
-               rng: np.random.Generator, simulations: int) -> Array:
+def _simulated(fields: list[Field], distances: list[Array], bins: _Bins, nugget: float, sill: float, correlation: Correlation,
+               reach: float, rng: np.random.Generator, simulations: int) -> Array:
     """Variograms (simulations, b) of fields drawn from a fit."""
     roots = []
     for field, d in zip(fields, distances, strict=True):
@@ -260,7 +281,8 @@ def _fit(observed: Array, pairs: Array, nugget: Array, sill: Array) -> tuple[Arr
 
 
 def _linear(observed: Array, weight: Array, nugget: Array, sill: Array) -> tuple[Array, Array, Array]:
-    """Least squares of n nugget + s sill with n, s ≥ 0: n, s and misfit, each (s, ranges); `sill` (s or 1, ranges, b)."""
+    """Least squares of n nugget + s sill with n, s ≥ 0: n, s and misfit, each (s, ranges); `sill` (s or 1, ranges, b).
+    """
     aa = (weight * nugget**2).sum(axis=1)[:, None]
     ay = (weight * nugget * observed).sum(axis=1)[:, None]
     ab = ((weight * nugget)[:, None] * sill).sum(axis=2)

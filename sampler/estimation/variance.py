@@ -42,7 +42,8 @@ class MeanSquare:
 
 @dataclass(frozen=True, slots=True)
 class OneWay:
-    """One-way analysis of variance. `size` is the group size that stands for unequal ones in E(between) = σ² + size σ_b²."""
+    """One-way analysis of variance. `size` is the group size that stands for unequal ones in E(between) = σ² + size
+    σ_b²."""
 
     between: MeanSquare
     within: MeanSquare
@@ -69,7 +70,8 @@ class OneWay:
 
 
 def one_way(y: Array, group: Codes) -> OneWay:
-    """Analysis of variance of readings y (n,) in groups (n,), which need not be of equal size (Searle 1971, sec. 10.2)."""
+    """Analysis of variance of readings y (n,) in groups (n,), which need not be of equal size (Searle 1971, sec. 10.2).
+    """
     _, code, count = np.unique(group, return_inverse=True, return_counts=True)
     mean = np.bincount(code, y - y[0]) / count  # from the first reading, so that a large common offset costs no digits
     off = y - y[0] - mean[code]
@@ -81,7 +83,8 @@ def one_way(y: Array, group: Codes) -> OneWay:
 
 
 def difference_interval(first: MeanSquare, second: MeanSquare, level: float = LEVEL) -> tuple[float, float]:
-    """Interval of the difference of two expected mean squares: modified large sample (Ting et al. 1990; Burdick & Graybill 1992).
+    """Interval of the difference of two expected mean squares: modified large sample (Ting et al. 1990; Burdick &
+    Graybill 1992).
 
     The ends may be negative; infinite without degrees of freedom.
     """
@@ -103,9 +106,9 @@ def difference_interval(first: MeanSquare, second: MeanSquare, level: float = LE
 
 @dataclass(frozen=True, slots=True)
 class Variation:
-    """How terms vary. `mean` (p,) with its covariance; `panel` and `lot` (p, p): covariance of a panel's terms within its lot and
-    of a lot's mean, both positive semidefinite; their 95 % intervals of standard deviation (p, 2). `lot` is zero and its
-    interval NaN with fewer than two lots; all is NaN with a single panel in every lot."""
+    """How terms vary. `mean` (p,) with its covariance; `panel` and `lot` (p, p): covariance of a panel's terms within
+    its lot and of a lot's mean, both positive semidefinite; their 95 % intervals of standard deviation (p, 2). `lot` is
+    zero and its interval NaN with fewer than two lots; all is NaN with a single panel in every lot."""
 
     mean: Array
     mean_covariance: Array
@@ -125,8 +128,8 @@ class Variation:
 def variation(theta: Array, covariance: Array, lot: Codes) -> Variation:
     """Panel-to-panel and lot-to-lot covariance of estimated terms, the covariance of the estimates taken out.
 
-    `theta` (P, p) with estimation covariance (P, p, p), `lot` (P,) codes. Moments: the pooled sample covariance within lots
-    estimates panel + mean estimation covariance; that of the lots' means estimates lot + (panel + estimation) / n.
+    `theta` (P, p) with estimation covariance (P, p, p), `lot` (P,) codes. Moments: the pooled sample covariance within
+    lots estimates panel + mean estimation covariance; that of the lots' means estimates lot + (panel + estimation) / n.
     Intervals within lots from the generalised Q statistic (Viechtbauer 2007), exact for normal terms; between lots by
     modified large sample on unweighted means (Thomas & Hultquist 1978).
     """
@@ -159,13 +162,14 @@ def variation(theta: Array, covariance: Array, lot: Codes) -> Variation:
 
 
 def _pooled(covariance: Array, code: Codes, count: Codes, dof: int) -> Array:
-    """What estimation adds to the pooled sample covariance within lots, (p, p): unequal covariances weigh by 1 − 1/n."""
+    """What estimation adds to the pooled sample covariance within lots, (p, p): unequal covariances weigh by 1 − 1/n.
+    """
     return np.einsum("i,ijk->jk", 1 - 1 / count[code], covariance) / dof
 
 
 def positive(matrix: Array) -> Array:
-    """The nearest positive semidefinite matrix when every variance is scaled to 1, so that units do not matter; a variance that is
-    not positive becomes 0 with its row."""
+    """The nearest positive semidefinite matrix when every variance is scaled to 1, so that units do not matter; a
+    variance that is not positive becomes 0 with its row."""
     size = np.sqrt(np.maximum(np.diag(matrix), 0.0))
     scale = np.where(size > 0, size, 1.0)
     scaled = np.where(np.outer(size > 0, size > 0), matrix / np.outer(scale, scale), 0.0)
@@ -176,10 +180,11 @@ def positive(matrix: Array) -> Array:
 
 
 def q_profile(theta: Array, variance: Array, group: Codes, level: float = LEVEL) -> Array:
-    """Interval of the variance among true values within groups, (p, 2), from estimates (P, p) with known variances (P, p).
+    """Interval of the variance among true values within groups, (p, 2), from estimates (P, p) with known variances (P,
+    p).
 
-    Q(v) = Σ (θ − weighted group mean)² / (v + variance) has a chi-square distribution at the true v; its ends are where Q reaches
-    the quantiles, 0 where it never does. Decreasing in v, so bisection in log v is safe.
+    Q(v) = Σ (θ − weighted group mean)² / (v + variance) has a chi-square distribution at the true v; its ends are where
+    Q reaches the quantiles, 0 where it never does. Decreasing in v, so bisection in log v is safe.
     """
     tail = (1 - level) / 2
     groups = int(group.max()) + 1
