@@ -49,11 +49,11 @@ class Factored:
         whole = np.concatenate([rows, prior])
         norm = np.linalg.norm(whole, axis=0)
         scale = np.where(norm > 0, norm, 1.0)
-        q, r, order = qr(whole / scale, mode="economic", pivoting=True)
+        factors: Any = qr(whole / scale, mode="economic", pivoting=True)
+        q, r, order = factors
         size = np.abs(np.diag(r))
         # Rounding of the factorisation itself (Golub & Van Loan 2013, sec. 5.5.8): below it a pivot carries nothing.
         rank = int((size > max(whole.shape) * np.finfo(float).eps).sum())
-        q, r = q.astype(np.float64, copy=False), r.astype(np.float64, copy=False)
         return cls(rows, q[:n, :rank], q[n:, :rank], r[:rank], np.asarray(order, np.int64), scale, with_prior, sd)
 
     @property

@@ -199,7 +199,7 @@ def test_saturated_and_certain_readings(rng):
     assert np.isnan(internal[0, 0]) and np.isfinite(internal[0, 1:]).all() and np.isfinite(external[0, 1:]).all()
 
 
-@pytest.mark.parametrize(("dof", "upper", "value"), [(1, 0.05, 3.841), (10, 0.05, 18.307), (100, 0.05, 124.342), (10, 0.025, 20.483),
-                                                     (50, 0.95, 34.764)])
+@pytest.mark.parametrize(("dof", "upper", "value"), [(1, 0.05, 3.841), (10, 0.05, 18.307), (100, 0.05, 124.342),
+                                                     (10, 0.025, 20.483), (50, 0.95, 34.764)])
 def test_chi_square_table(dof, upper, value):
     assert chance_above(value, dof) == pytest.approx(upper, abs=2e-5)
