@@ -120,10 +120,11 @@ class _Bounder:
             lax = peak.excess > EXCESS * 100
             if not len(paying) and not len(missed) and not lax and tolerance <= GAP:
                 break
+            if tolerance == FIRST_GAP:  # only once, so that columns cannot come and go for ever
+                columns = columns[(gains[columns] > -IDLE) | (peak.weights > IDLE)]
             tolerance = max(GAP, tolerance / TIGHTENING)
             if lax:
                 penalty *= 10.0
-            columns = columns[(gains[columns] > -IDLE) | (peak.weights > IDLE)] if len(paying) else columns
             order = np.lexsort((self.problem.key[paying], -gains[paying]))
             columns = np.union1d(columns, paying[order[:MORE_COLUMNS]])
             self.watch = np.union1d(self.watch, missed[np.argsort(-ratio[missed], kind="stable")[:WATCHED]])
