@@ -14,11 +14,12 @@ from sampler.optimise.problem import SiteProblem
 Array = NDArray[np.float64]
 Indices = NDArray[np.int64]
 
-PRE = lambda part, gap: part * gap
-PER = 3
 SQUARE, NAMED = -1, -2
-TRIALS = 10
-"""How many splits are tried with a linear program each before one is taken."""
+PLAIN_TRIALS, CAP_TRIALS = 4, 6
+"""Splits of each kind that are tried with a linear program before one is taken; caps alone do badly on coarse grids."""
+CAPS = 8
+"""Sites around which caps are proposed: the most fractional ones."""
+LEAST_PART, LEAST_GAP = 1e-5, 1e-7
 
 
 @dataclass(frozen=True, slots=True)
@@ -71,11 +72,22 @@ class Splits:
         rows = self.problem.blocks[self.order if sites is None else self.order[sites]]
         return rows[:, axis] @ vector if axis >= 0 else ((rows @ vector) ** 2).sum(axis=1)
 
-    def propose(self, sites: Indices, w: Array, worst: list[tuple[int, Array]]) -> list[HalfSpace]:
-        features = list(self.fixed)
-        for block, z in worst:
-            lifted = self.split.blocks[block].lifts[0] @ z
-            features += [(axis, lifted) for axis in range(self.problem.blocks.shape[1])] + [(SQUARE, lifted)]
+    def propose(self, sites: Indices, w: Array, worst: list[tuple[int, Array]],
+                caps: list[tuple[int, Array]]) -> list[HalfSpace]:
+        """Half-spaces to try at weights w on `sites`: by the terms and by `worst` (block, z), and `caps` (block, z)."""
+        plain = [feature for block, z in worst for feature in self._features(block, z)]
+        around = [feature for block, z in caps for feature in self._features(block, z)]
+        taken: set[tuple[int, ...]] = set()
+        return self._best(self.fixed + plain, sites, w, taken, 2, PLAIN_TRIALS) + \
+            self._best(around, sites, w, taken, 1, CAP_TRIALS)
+
+    def _features(self, block: int, z: Array) -> list[tuple[int, Array]]:
+        lifted = self.split.blocks[block].lifts[0] @ z
+        return [(axis, lifted) for axis in range(self.problem.blocks.shape[1])] + [(SQUARE, lifted)]
+
+    def _best(self, features: list[tuple[int, Array]], sites: Indices, w: Array, taken: set[tuple[int, ...]], per: int,
+              most: int) -> list[HalfSpace]:
+        """The best scored splits, at most `per` of a feature: fractional part of the count × gap beside the threshold."""
         found: list[tuple[float, int, float, float, int, tuple[int, ...]]] = []
         for index, (axis, vector) in enumerate(features):
             values = self.values(axis, vector, sites)
@@ -87,23 +99,21 @@ class Splits:
             gap = np.diff(values)
             part = cumulated[:-1] - np.floor(cumulated[:-1] + 1e-6)
             part = np.minimum(part, 1 - part)
-            score = PRE(part, gap)
-            for at in np.argsort(-score, kind="stable")[:PER]:
-                if part[at] > 1e-5 and gap[at] > 1e-7:
+            score = part * gap
+            for at in np.argsort(-score, kind="stable")[:per]:
+                if part[at] > LEAST_PART and gap[at] > LEAST_GAP:
                     inside = tuple(sorted(order[: at + 1].tolist()))
                     found.append((float(score[at]), index, values[at] * spread, values[at + 1] * spread,
                                   int(np.floor(cumulated[at] + 1e-6)), inside))
         found.sort(key=lambda item: -item[0])
         options: list[HalfSpace] = []
-        taken: set[tuple[int, ...]] = set()
         for _, index, low, high, at_most, inside in found:
             if inside in taken:
                 continue
             taken.add(inside)
             axis, vector = features[index]
-            values = self.values(axis, vector)
-            options.append(self._half(axis, vector, values, low, high, at_most))
-            if len(options) == TRIALS:
+            options.append(self._half(axis, vector, self.values(axis, vector), low, high, at_most))
+            if len(options) == most:
                 break
         return options
 

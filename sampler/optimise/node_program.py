@@ -21,6 +21,10 @@ LARGEST_T = 4.0
 """t is capped while the rows do not yet bound it."""
 ELASTIC_PRICE = 50.0
 """What breaking a count row by one site costs, in t; any price gives a valid bound, a small one a weaker bound."""
+TRIAL_STEPS = 15
+MOST_STEPS = 2_147_483_647
+CLOSED_T = 0.99
+"""A trial ends once t is below this: the child would be closed at once."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -80,7 +84,7 @@ class NodeProgram:
         self.rows += 1
 
     def add_count(self, member: NDArray[np.bool_]) -> None:
-        """A count row over the program's sites, (sites,) 0 or 1; without bounds until `set_counts`."""
+        """A count row over the program's sites, (sites,); without bounds until `set_counts`."""
         nothing, none = np.zeros(0, np.int32), np.zeros(0)
         for _ in range(2):
             self.solver.addCol(ELASTIC_PRICE, 0.0, np.inf, 0, nothing, none)
@@ -111,21 +115,34 @@ class NodeProgram:
                 return None
         solution = self.solver.getSolution()
         value, dual = np.array(solution.col_value), np.array(solution.row_dual)
-        t = -self.solver.getInfo().objective_function_value
-        return Solution(t, value[self.site_column], np.maximum(dual[self.cover_row], 0.0), max(-dual[0], 0.0),
+        return Solution(self.t, value[self.site_column], np.maximum(dual[self.cover_row], 0.0), max(-dual[0], 0.0),
                         -dual[self.count_row])
 
+    @property
+    def t(self) -> float:
+        """t as the last run left it."""
+        return -float(self.solver.getInfo().objective_function_value)
+
     def trial(self, member: NDArray[np.bool_], at_most: int) -> tuple[float, float]:
-        """t with at most, and with more than, `at_most` of the member sites; the program is put back as it was."""
-        basis = self.solver.getBasis()
+        """Estimates of t with at most, and with more than, `at_most` of the member sites; the program stays as it was.
+
+        A few dual simplex steps give an upper bound of each optimum, near enough to choose by.
+        """
+        before = self.solver.getBasis()
         held = np.array(self.site_column, np.int32)[member]
         self.solver.addRow(-np.inf, at_most, len(held), held, np.ones(len(held)))
+        start = self.solver.getBasis()
+        self.solver.setOptionValue("simplex_iteration_limit", TRIAL_STEPS)
+        self.solver.setOptionValue("objective_bound", -CLOSED_T)
         values = []
         for low, high in ((-np.inf, at_most), (at_most + 1.0, np.inf)):
             self.solver.changeRowBounds(self.rows, low, high)
+            self.solver.setBasis(start)
             self.solver.run()
-            optimal = self.solver.getModelStatus() == highspy.HighsModelStatus.kOptimal
-            values.append(-self.solver.getInfo().objective_function_value if optimal else -ELASTIC_PRICE)
+            nothing = self.solver.getModelStatus() == highspy.HighsModelStatus.kInfeasible
+            values.append(0.0 if nothing else self.t)
+        self.solver.setOptionValue("simplex_iteration_limit", MOST_STEPS)
+        self.solver.setOptionValue("objective_bound", np.inf)
         self.solver.deleteRows(1, np.array([self.rows], np.int32))
-        self.solver.setBasis(basis)
+        self.solver.setBasis(before)
         return values[0], values[1]

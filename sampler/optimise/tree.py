@@ -21,10 +21,10 @@ import numpy as np
 from numpy.typing import NDArray
 
 from sampler.optimise.blocks import Split
-from sampler.optimise.branching import HalfSpace, Splits
+from sampler.optimise.branching import CAPS, HalfSpace, Splits
 from sampler.optimise.certificate import counting_certificate, tree_certificate
 from sampler.optimise.gram import Gram, Row, cover
-from sampler.optimise.node_program import NodeProgram, Solution
+from sampler.optimise.node_program import CLOSED_T, NodeProgram, Solution
 from sampler.optimise.problem import SiteProblem
 from sampler.optimise.rows import RowPool
 from sampler.optimise.steps import Multipliers, Step
@@ -42,6 +42,7 @@ RIDGE = 1e-9
 FIRST_COLUMNS = 100
 MOST_ROUNDS = 200
 """Rows or columns are added at most so often in one node before it is branched on as it stands."""
+LEAST_LOSS = 1e-4
 PROGRAM_ROWS = 100
 PROGRAM_COLUMNS = 250
 """The program is rebuilt with what was used lately when it holds more than this."""
@@ -68,9 +69,6 @@ class _Node:
     path: tuple[tuple[int, bool, int], ...]  # (split, at most?, count)
     sites: Indices
     w: Array  # the parent's weights, on `sites`
-
-
-SCORE = lambda hi, lo, t: max(t - max(hi, 0.99), 1e-4) * max(t - max(lo, 0.99), 1e-4)
 
 
 class Tree:
@@ -197,8 +195,7 @@ class Tree:
         for block in self.blocks:
             here = block.rows[self.order[sites]]
             information = block.prior + np.einsum("i,imp,imq->pq", w, here, here, optimize=True)
-            ridge = RIDGE * np.trace(information) / max(block.q, 1) + 1e-14
-            part = np.linalg.solve(information + ridge * np.eye(block.q), block.columns)
+            part = np.asarray(np.linalg.solve(_ridged(information), block.columns), np.float64)
             solved.append(part)
             variance.append(np.einsum("qk,qk->k", block.columns, part))
         return self.split.variances(variance), solved
@@ -391,7 +388,7 @@ class Tree:
         if solution is not None:
             slack, price, margin, multipliers = self._price(node, solution)
             self._fix(node, slack, price, margin, multipliers)
-        half = self._best_split(node, sites, w) or self.splits.single(sites, w)
+        half = self._best_split(sites, w) or self.splits.single(sites, w)
         if half is None:
             self.undecided = True
             return
@@ -403,29 +400,37 @@ class Tree:
             self.stack.append(_Node(node.lower.copy(), node.upper.copy(), (*node.path, (split, at_most, count)),
                                     sites, w))
 
-    def _best_split(self, node: _Node, sites: Indices, w: Array) -> HalfSpace | None:
-        """Strong branching: the split whose two children lose most t, among the best scored."""
-        options = self.splits.propose(sites, w, self._worst(sites, w))
-        if not options:
-            return None
-        at = self.program.sites
-        t = self.program.solver.getInfo().objective_function_value * -1
+    def _best_split(self, sites: Indices, w: Array) -> HalfSpace | None:
+        """Strong branching: of the splits proposed, the one whose children lose most t, by the product of both losses."""
+        ratios, solved = self._variances(sites, w)
+        worst = [(block, z[:, k]) for row in self._new_rows(ratios, solved, 3, 0.0) for block, z in enumerate(row.z)
+                 for k in range(z.shape[1])]
+        at, t = self.program.sites, self.program.t
         best, best_score = None, -np.inf
-        for half in options:
-            low, high = self.program.trial(half.mask[at], half.at_most)
-            score = SCORE(max(low, high), min(low, high), t)
-            if score > best_score:
-                best, best_score = half, score
+        for half in self.splits.propose(sites, w, worst, self._caps(sites, w)):
+            losses = [max(t - max(child, CLOSED_T), LEAST_LOSS) for child in self.program.trial(half.mask[at], half.at_most)]
+            if losses[0] * losses[1] > best_score:
+                best, best_score = half, losses[0] * losses[1]
         return best
 
-    def _worst(self, sites: Indices, w: Array) -> list[tuple[int, Array]]:
-        """(block, z) of the worst limits at w: directions that suggest half-spaces."""
-        ratios, solved = self._variances(sites, w)
-        worst = []
-        for row in self._new_rows(ratios, solved, 3, 0.0):
-            for block, z in enumerate(row.z):
-                worst += [(block, z[:, k]) for k in range(z.shape[1])]
-        return worst
+    def _caps(self, sites: Indices, w: Array) -> list[tuple[int, Array]]:
+        """(block, −M⁻¹bᵢ) of the most fractional sites i: bᵢᵀM⁻¹b is large for the sites that tell the same as i.
+
+        Near the edge of feasibility weight spreads over such neighbours, so that counting a cap is what decides.
+        """
+        most = np.argsort(-np.minimum(w, 1 - w), kind="stable")[:CAPS]
+        caps = []
+        for number, block in enumerate(self.blocks):
+            here = block.rows[self.order[sites]]
+            solved = np.linalg.solve(_ridged(block.prior + np.einsum("i,imp,imq->pq", w, here, here, optimize=True)),
+                                     here[most].reshape(-1, block.q).T)
+            caps += [(number, -z) for z in solved.T]
+        return caps
+
+
+def _ridged(information: Array) -> Array:
+    q = len(information)
+    return information + (RIDGE * np.trace(information) / max(q, 1) + 1e-14) * np.eye(q)
 
 
 def _pool_row(split: Split, rows: RowPool, index: int) -> Row:
