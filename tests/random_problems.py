@@ -116,14 +116,18 @@ def allowed(problem, chosen):
             and (problem.max_sites is None or inside.sum() <= problem.max_sites))
 
 
+def all_subsets(n):
+    """All subsets of n, the small ones first."""
+    return (chosen for size in range(n + 1) for chosen in combinations(range(n), size))
+
+
 def cheapest_by_enumeration(problem):
     """(cost, one set) over all subsets, or (inf, None)."""
     best = (np.inf, None)
-    for size in range(problem.n + 1):
-        for chosen in combinations(range(problem.n), size):
-            cost = problem.cost[list(chosen)].sum()
-            if cost < best[0] and allowed(problem, chosen) and variance_ratios(problem, chosen).max() <= 1 + 1e-9:
-                best = (cost, chosen)
+    for chosen in all_subsets(problem.n):
+        cost = problem.cost[list(chosen)].sum()
+        if cost < best[0] and allowed(problem, chosen) and variance_ratios(problem, chosen).max() <= 1 + 1e-9:
+            best = (cost, chosen)
     return best
 
 

@@ -23,9 +23,11 @@ from sampler.optimise.counting import counting_bound, rules_admit
 from sampler.optimise.exchange import fewest
 from sampler.optimise.informative import most_informative
 from sampler.optimise.log_det import log_det, log_det_bound
+from sampler.optimise.lost import ratios_after_loss
 from sampler.optimise.pool import cost_step
 from sampler.optimise.problem import SearchResult, SiteProblem
 from sampler.optimise.relaxation import FEASIBLE, Relaxation, relax
+from sampler.optimise.spacing import spaced
 from sampler.optimise.tree import decide
 
 Progress = Callable[[float, float], None]
@@ -40,8 +42,10 @@ TURN_GROWTH = 3.0
 """Seconds that exchange, and then the tree, work before the other has its turn, and how they grow. They do not depend on
 the time limit, so a longer search begins with what a shorter one does."""
 POLISH_SHARE = 0.1
-LEAST_POLISH = 0.5
-"""Of the time limit this share is kept for log det; when the proof was quick, this many seconds are spent on it."""
+LEAST_POLISH, LEAST_BOUND = 0.5, 2.0
+"""Of the time limit this share is kept for log det; when the proof was quick, so many seconds are spent on raising it, and
+on the bound of it so many or as long as everything before took."""
+MOST_NEAR, NEARLY_PAID = 20_000, 0.1
 
 
 @dataclass(slots=True)
@@ -49,6 +53,7 @@ class _Standing:
     """The interval as it stands: no set costs less than `bound`; `chosen` costs `cost`."""
 
     problem: SiteProblem
+    parts: Split
     began: float
     progress: Progress | None
     bound: float = 0.0
@@ -65,8 +70,8 @@ class _Standing:
             self._tell()
 
     def offer(self, chosen: Indices | None) -> None:
-        """Takes a set that meets limits and rules if it is the cheapest so far."""
-        if chosen is not None and self.problem.cost[chosen].sum() < self.cost:
+        """Takes a set if it is the cheapest so far and meets limits and rules."""
+        if chosen is not None and self.problem.cost[chosen].sum() < self.cost and meets(self.parts, self.problem, chosen):
             self.chosen, self.cost = np.sort(chosen), float(self.problem.cost[chosen].sum())
             self._tell()
 
@@ -90,18 +95,22 @@ def search(problem: SiteProblem, *, seconds: float, seed: int, progress: Progres
     """
     began = time.monotonic()
     order = np.argsort(problem.key, kind="stable")
-    ordered = problem if np.array_equal(order, np.arange(problem.n)) else _reordered(problem, order)
+    ordered = problem if np.array_equal(order, np.arange(problem.n)) else subset(problem, order)
     place = np.argsort(order)
     start = None if warm is None or warm.chosen is None else np.sort(place[warm.chosen])
     result = _search(ordered, began, began + seconds, np.random.default_rng(seed), progress, stop, start)
     return result if result.chosen is None else replace(result, chosen=np.sort(order[result.chosen]))
 
 
-def _reordered(problem: SiteProblem, order: Indices) -> SiteProblem:
-    place = np.argsort(order)
-    rules = replace(problem.rules, members=tuple(np.sort(place[members]) for members in problem.rules.members))
-    return replace(problem, blocks=problem.blocks[order], cost=problem.cost[order], required=problem.required[order],
-                   forbidden=problem.forbidden[order], key=problem.key[order], rules=rules)
+def subset(problem: SiteProblem, sites: Indices) -> SiteProblem:
+    """The problem on the sites named, in that order."""
+    place = np.full(problem.n, -1)
+    place[sites] = np.arange(len(sites))
+    members = tuple(np.sort(place[inside][place[inside] >= 0]) for inside in problem.rules.members)
+    return replace(problem, blocks=problem.blocks[sites], cost=problem.cost[sites], required=problem.required[sites],
+                   forbidden=problem.forbidden[sites], key=problem.key[sites],
+                   rules=replace(problem.rules, members=members),
+                   xy=None if problem.xy is None else problem.xy[sites])
 
 
 def _search(problem: SiteProblem, began: float, until: float, rng: np.random.Generator, progress: Progress | None,
@@ -109,10 +118,10 @@ def _search(problem: SiteProblem, began: float, until: float, rng: np.random.Gen
     def ended() -> bool:
         return time.monotonic() >= until or (stop is not None and stop())
 
-    standing = _Standing(problem, began, progress)
+    parts = split(problem)
+    standing = _Standing(problem, parts, began, progress)
     if not rules_admit(problem):
         return standing.result("rules")
-    parts = split(problem)
     relaxed = relax(parts, problem, seconds=until - time.monotonic(), progress=progress, stop=stop)
     if relaxed.worst_ratio**2 > FEASIBLE:
         return standing.result("cannot", worst_ratio=relaxed.worst_ratio)
@@ -123,25 +132,57 @@ def _search(problem: SiteProblem, began: float, until: float, rng: np.random.Gen
         counted = rounded_up(counted, step)
         standing.prove(counted, counting_certificate(parts, problem, counted - step))
     for known in (start, heaviest(parts, problem, relaxed.weights), np.flatnonzero(~problem.forbidden)):
-        if known is not None and meets(parts, problem, known):
-            standing.offer(known)
+        standing.offer(known)
 
-    _close(standing, parts, relaxed, step, rng, until - POLISH_SHARE * (until - began), stop)
+    near, pace = _Near.of(parts, problem, relaxed), time.monotonic() - began
+    kept = min(max(POLISH_SHARE * (until - began), 2.0 * pace), 0.5 * (until - began))
+    _close(standing, parts, relaxed, near, step, rng, until - kept, pace, stop)
     if standing.chosen is None:
         return standing.result("rules" if standing.bound > most_cost(problem) else "interval", interrupted=ended())
     proven = rounded_up(standing.bound, step) >= standing.cost * (1.0 - ROUNDING)
     now = time.monotonic()
-    polished = min(until, now + max(LEAST_POLISH, POLISH_SHARE * (now - began)))
-    standing.chosen = np.sort(most_informative(parts, problem, standing.chosen, rng=rng.spawn(1)[0], deadline=polished,
-                                               stop=stop))
-    reach = log_det_bound(parts, problem, standing.cost, deadline=until)
-    return standing.result("proven" if proven else "interval", log_det=log_det(parts, problem, standing.chosen),
-                           log_det_bound=reach.value, interrupted=not proven and ended())
+    polished = min(until - pace, now + max(LEAST_POLISH, POLISH_SHARE * (now - began)))
+    chosen = near.outward(most_informative(near.parts, near.problem, near.inward(standing.chosen), rng=rng.spawn(1)[0],
+                                           deadline=polished, stop=stop))
+    now, standing.chosen, reach = time.monotonic(), chosen, np.nan
+    if until - now >= pace:
+        reach = log_det_bound(parts, problem, standing.cost, deadline=min(until, now + max(LEAST_BOUND, now - began))).value
+    return standing.result("proven" if proven else "interval", log_det=log_det(parts, problem, chosen),
+                           log_det_bound=reach, interrupted=not proven and ended())
 
 
-def _close(standing: _Standing, parts: Split, relaxed: Relaxation, step: float | None, rng: np.random.Generator,
-           until: float, stop: Callable[[], bool] | None) -> None:
-    """Exchange from above and the tree from below, in turns, until they meet or time ends.
+@dataclass(frozen=True, slots=True)
+class _Near:
+    """The sites that exchange works on: all, or of very many a sample of those that the relaxation's duals nearly pay for."""
+
+    sites: Indices
+    parts: Split
+    problem: SiteProblem
+    weights: NDArray[np.float64]
+    reduced_costs: NDArray[np.float64]
+
+    @classmethod
+    def of(cls, parts: Split, problem: SiteProblem, relaxed: Relaxation) -> _Near:
+        if problem.n <= MOST_NEAR or problem.rules.members:
+            return cls(np.arange(problem.n), parts, problem, relaxed.weights, relaxed.reduced_costs)
+        held = problem.required | (relaxed.weights > 0)
+        cheap = np.flatnonzero(~held & ~problem.forbidden & (relaxed.reduced_costs < NEARLY_PAID * problem.cost))
+        some = np.random.default_rng(0).choice(cheap, min(MOST_NEAR, len(cheap)), replace=False)
+        sites = np.union1d(np.flatnonzero(held), some)
+        return cls(sites, replace(parts, blocks=tuple(replace(block, rows=block.rows[sites]) for block in parts.blocks)),
+                   subset(problem, sites), relaxed.weights[sites], relaxed.reduced_costs[sites])
+
+    def outward(self, chosen: Indices) -> Indices:
+        return np.sort(self.sites[chosen])
+
+    def inward(self, chosen: Indices) -> Indices:
+        return np.searchsorted(self.sites, chosen)
+
+
+def _close(standing: _Standing, parts: Split, relaxed: Relaxation, near: _Near, step: float | None,
+           rng: np.random.Generator, until: float, pace: float, stop: Callable[[], bool] | None) -> None:
+    """Exchange from above and the tree from below, in turns, until they meet or time ends; `pace`: seconds that a few
+    passes over all candidates take, which the tree needs before it looks at the clock.
 
     When costs are not whole numbers they meet when the tree has excluded all below the best cost less COST_GAP of it.
     """
@@ -151,13 +192,14 @@ def _close(standing: _Standing, parts: Split, relaxed: Relaxation, step: float |
         enough = standing.cost * (1.0 - (ROUNDING if step is not None else COST_GAP))
         if least >= enough or least > most_cost(problem):
             return
-        standing.offer(fewest(parts, problem, weights=relaxed.weights, reduced_costs=relaxed.reduced_costs,
-                              upper=None if standing.chosen is None else standing.cost, lower=least,
-                              rng=rng.spawn(1)[0], deadline=min(until, time.monotonic() + turn), stop=stop,
-                              on_found=standing.offer))
+        fewest(
+            near.parts, near.problem, weights=near.weights, reduced_costs=near.reduced_costs,
+            upper=None if standing.chosen is None else standing.cost, lower=least, rng=rng.spawn(1)[0],
+            deadline=min(until, time.monotonic() + turn), stop=stop,
+            on_found=lambda found: standing.offer(near.outward(found)))
         left = min(turn, until - time.monotonic())
         asked = least if step is not None else standing.cost * (1.0 - COST_GAP)
-        if asked < standing.cost * (1.0 - ROUNDING) and left > 0.0:
+        if asked < standing.cost * (1.0 - ROUNDING) and left > pace:
             decision = decide(parts, problem, asked, rows=relaxed.rows, weights=relaxed.weights, stop=stop, seconds=left)
             standing.offer(decision.chosen)
             if decision.status == "impossible":
@@ -173,14 +215,15 @@ def _linear_certificate(problem: SiteProblem, relaxed: Relaxation) -> dict[str, 
 
 
 def meets(parts: Split, problem: SiteProblem, chosen: Indices) -> bool:
-    """Whether the chosen sites meet every limit and rule."""
+    """Whether the chosen sites meet every limit and rule, also after the losses that must be borne."""
     inside = np.zeros(problem.n, bool)
     inside[chosen] = True
     counts = np.array([inside[members].sum() for members in problem.rules.members])
     return bool(not np.any(problem.required & ~inside) and not np.any(problem.forbidden & inside)
                 and np.all(counts >= problem.rules.lower) and np.all(counts <= problem.rules.upper)
                 and (problem.max_sites is None or len(chosen) <= problem.max_sites)
-                and np.all(parts.ratios(chosen) <= FEASIBLE))
+                and (problem.xy is None or problem.spacing <= 0 or spaced(problem.xy[chosen], problem.spacing))
+                and np.all(ratios_after_loss(parts, chosen, problem.lost) <= FEASIBLE))
 
 
 def heaviest(parts: Split, problem: SiteProblem, weights: NDArray[np.float64]) -> Indices:
@@ -192,7 +235,8 @@ def heaviest(parts: Split, problem: SiteProblem, weights: NDArray[np.float64]) -
     few, enough = int(problem.required.sum()), int((~problem.forbidden).sum())
     while few < enough:
         middle = (few + enough) // 2
-        few, enough = (few, middle) if np.all(parts.ratios(order[:middle]) <= FEASIBLE) else (middle + 1, enough)
+        met = np.all(ratios_after_loss(parts, np.sort(order[:middle]), problem.lost) <= FEASIBLE)
+        few, enough = (few, middle) if met else (middle + 1, enough)
     return np.sort(order[:enough])
 
 

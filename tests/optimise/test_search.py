@@ -9,6 +9,7 @@ from dataclasses import replace
 import numpy as np
 import pytest
 from random_problems import (
+    all_subsets,
     allowed,
     cheapest_by_enumeration,
     grid_problem,
@@ -247,6 +248,17 @@ def test_the_heaviest_sites_are_as_few_as_will_do(seed, rng):
     assert variance_ratios(problem, found[found != light]).max() > 1
 
 
+def test_exchange_among_a_sample_of_the_sites(monkeypatch):
+    """As with a million candidates: exchange sees some of them, bound and proof all."""
+    problem = grid_problem(18, 2, 23.9)
+    whole = search(problem, seconds=20, seed=1)
+    monkeypatch.setattr("sampler.optimise.search.MOST_NEAR", 60)
+    result = search(problem, seconds=20, seed=1)
+    assert result.lower_bound == whole.lower_bound
+    assert len(result.chosen) <= len(whole.chosen) + 1
+    assert variance_ratios(problem, result.chosen).max() <= 1 + 1e-8
+
+
 def test_meets_sees_every_rule():
     problem = grid_problem(5, 1, 4)
     parts, chosen = split(problem), np.array([0, 4, 20, 24])
@@ -254,7 +266,8 @@ def test_meets_sees_every_rule():
     assert not meets(parts, problem, chosen[:3])
     for change in ({"required": np.arange(25) == 1}, {"forbidden": np.arange(25) == 4}, {"max_sites": 3},
                    {"rules": CountRules((np.arange(5),), np.array([3.0]), np.array([5.0]))},
-                   {"rules": CountRules((np.arange(5),), np.array([0.0]), np.array([1.0]))}):
+                   {"rules": CountRules((np.arange(5),), np.array([0.0]), np.array([1.0]))}, {"lost": 1},
+                   {"xy": problem.blocks[:, 0, 1:3], "spacing": 2.1}):
         assert not meets(parts, replace(problem, **change), chosen)
 
 
