@@ -85,7 +85,7 @@ class SearchResult:
     below the count, or time ended), "cannot" (even all candidates fail: `worst_ratio` with all of them > 1),
     "rules" (the rules admit no set). `lower_bound` is a valid bound on the cost of any set that meets limits and rules;
     `certificate`: its proof, as certificate.py lays it out. `log_det` of the information on the terms of interest;
-    `log_det_bound` an upper bound over all sets of the same count that meet the limits (NaN if not computed).
+    `log_det_bound` an upper bound over all sets of the same count that meet the limits (infinite if time did not allow one).
     """
 
     chosen: NDArray[np.int64] | None

@@ -144,7 +144,7 @@ def _search(problem: SiteProblem, began: float, until: float, rng: np.random.Gen
     polished = min(until - pace, now + max(LEAST_POLISH, POLISH_SHARE * (now - began)))
     chosen = near.outward(most_informative(near.parts, near.problem, near.inward(standing.chosen), rng=rng.spawn(1)[0],
                                            deadline=polished, stop=stop))
-    now, standing.chosen, reach = time.monotonic(), chosen, np.nan
+    now, standing.chosen, reach = time.monotonic(), chosen, np.inf
     if until - now >= pace:
         reach = log_det_bound(parts, problem, standing.cost, deadline=min(until, now + max(LEAST_BOUND, now - began))).value
     return standing.result("proven" if proven else "interval", log_det=log_det(parts, problem, chosen),
