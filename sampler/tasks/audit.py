@@ -10,9 +10,9 @@ import numpy as np
 from numpy.typing import NDArray
 
 from sampler.errors import InputError
-from sampler.tasks.plan import MEETS, plan, with_floors
+from sampler.tasks.plan import plan, with_floors
 from sampler.tasks.question import Question, achieved, everything, knowledge_of, limits_achieved, question
-from sampler.tasks.results import SiteAudit
+from sampler.tasks.results import MEETS, SiteAudit
 from sampler.tasks.study import Study
 from sampler.tasks.units import Visits
 from sampler.uncertainty.information import information
@@ -35,7 +35,7 @@ def audit(study: Study, ids: Sequence[str], *, search_fewest: bool = True,
     rows = _rows(asked, ids)
     found = with_floors(achieved(asked, _visits(asked, rows)), achieved(asked, everything(asked)))
     fewest = plan(study, progress=progress, stop=stop, asked=asked) if search_fewest else None
-    met = all(limit.ratio <= MEETS for limit in found.limits)
+    met = found.meets_limits
     droppable = tuple(str(asked.candidates.sites.id[row]) for row in rows if met and _meets_without(asked, rows, row))
     efficiency = math.nan
     if fewest is not None and fewest.status != "cannot":

@@ -29,7 +29,7 @@ from sampler.tasks.question import (
     region_rows,
     worst_of,
 )
-from sampler.tasks.results import Audit, Plan
+from sampler.tasks.results import MEETS, Audit, Plan
 from sampler.tasks.study import RegionLimit, Study
 from sampler.tasks.units import Visits
 from sampler.uncertainty.information import Knowledge
@@ -38,8 +38,6 @@ from sampler.uncertainty.limits import Limits, stack
 Progress = Callable[[float, float], None]
 Indices = NDArray[np.int64]
 
-MEETS = 1.0 + 1e-9
-"""A ratio to the limit up to this meets it: rounding of the variances, far below any digit shown."""
 FIRST_SHARE = 0.2
 """Share of the time left that a search may take while the rows of region limits still grow."""
 ROUNDS = 12
@@ -62,7 +60,7 @@ def plan(study: Study, *, progress: Progress | None = None, stop: Callable[[], b
     began = time.monotonic()
     asked = question(study) if asked is None else asked
     best_possible = achieved(asked, everything(asked))
-    if not _meets(best_possible):
+    if not best_possible.meets_limits:
         return Plan(study, asked.candidates, best_possible, "cannot", math.nan, {}, math.nan, advise(asked, best_possible),
                     study.warnings, time.monotonic() - began)
     searched = _Search(asked, began + study.search.seconds, progress, stop)
@@ -70,10 +68,6 @@ def plan(study: Study, *, progress: Progress | None = None, stop: Callable[[], b
     if found.units is None:
         return _nothing_found(asked, found, best_possible, began)
     return _plan(asked, found, best_possible, began)
-
-
-def _meets(audit: Audit) -> bool:
-    return all(limit.ratio <= MEETS for limit in audit.limits)
 
 
 def _plan(asked: Question, found: Found, best_possible: Audit, began: float) -> Plan:
@@ -146,8 +140,11 @@ class _Search:
                 break
         return self._found()
 
+    def _stopped(self) -> bool:
+        return self.stop is not None and self.stop()
+
     def _over(self) -> bool:
-        return time.monotonic() >= self.until or (self.stop is not None and self.stop())
+        return time.monotonic() >= self.until or self._stopped()
 
     def _problem(self) -> SiteProblem:
         problem = problem_of(self.asked, self.limits, self.tighten)
@@ -205,10 +202,11 @@ class _Search:
     def _found(self) -> Found:
         best, bound = self.best, self.bound + self.constant
         if best is None:
-            return Found(None, bound, bound if self.cost is None else math.nan, False, math.nan, self.certificate, self._over())
+            return Found(None, bound, bound if self.cost is None else math.nan, False, math.nan, self.certificate,
+                         self._stopped())
         proven = self.cost is None and math.ceil(self.bound - 1e-6) >= self._objective(best)
         return Found(best.chosen, bound, bound if self.cost is None else math.nan, proven, best.log_det_bound,
-                     self.certificate, not proven and self._over())
+                     self.certificate, not proven and self._stopped())
 
 
 def _costs(asked: Question) -> tuple[NDArray[np.float64] | None, float]:

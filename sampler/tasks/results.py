@@ -23,6 +23,10 @@ def whole_sites(bound: float) -> int:
     return max(0, math.ceil(bound - BOUND_TOLERANCE)) if math.isfinite(bound) else 0
 
 
+MEETS = 1.0 + 1e-9
+"""A ratio to the limit up to this meets it: rounding of the variances, far below any digit shown."""
+
+
 @dataclass(frozen=True, slots=True)
 class AuditedLimit:
     """One limit: `predicted` and `maximum` are k·u in `unit`; `where_mm` is the worst place of a region limit.
@@ -84,7 +88,7 @@ class Audit:
 
     @property
     def meets_limits(self) -> bool:
-        return all(limit.ratio <= 1.0 for limit in self.limits)
+        return all(limit.ratio <= MEETS for limit in self.limits)
 
     @property
     def worst(self) -> AuditedLimit:
