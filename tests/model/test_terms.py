@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import doctest
+import re
 
 import numpy as np
 import pytest
@@ -42,6 +43,23 @@ def test_counts_of_the_families():
 ])
 def test_responses(name, expected):
     assert response(name, (100, -50)) == pytest.approx(expected, abs=1e-15)
+
+
+LINEAR = {"translation_x": (1, 0), "translation_y": (0, 1), "scale_x": (0.1, 0), "scale_y": (0, -0.05),
+          "magnification": (0.1, -0.05), "rotation": (0.05, 0.1), "orthogonality": (0.05, 0)}
+
+
+def test_every_term_of_the_table_has_a_worked_response():
+    """A new term must be given its response at x = 100 mm, y = −50 mm (u = ½, v = −½) here, or be a monomial of u, v."""
+    for name in TERMS:
+        found = re.fullmatch(r"(dx|dy)_((?:x\d?)?(?:y\d?)?)", name)
+        if found is None:
+            expected = LINEAR[name]
+        else:
+            powers = {letter: int(power or 1) for letter, power in re.findall(r"([xy])(\d?)", found.group(2))}
+            value = 0.5 ** powers.get("x", 0) * (-0.5) ** powers.get("y", 0)
+            expected = (value, 0) if found.group(1) == "dx" else (0, value)
+        assert response(name, (100, -50)) == pytest.approx(expected, abs=1e-15), name
 
 
 def test_rotation_is_counter_clockwise():
