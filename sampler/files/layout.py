@@ -45,6 +45,12 @@ NAME = re.compile(r"[A-Za-z][A-Za-z0-9_-]*")
 NOT_A_GRID = ("panel", "potential")
 """Names that `[model]` uses itself."""
 
+SHAPE_KEYS = (
+    Key("rectangle_mm", numbers(4, "[x0, y0, x1, y1]")),
+    Key("circle_mm", numbers(3, "[x, y, radius]")),
+    Key("polygon_mm", points(3)),
+)
+
 KEYS = (
     Key("format", format_number, "format = 1"),
     Key("name", text),
@@ -74,9 +80,7 @@ KEYS = (
     ), "at least one table [[marks]]"),
     Key("keep_out", tables(
         Key("name", text, "a name for the keep-out"),
-        Key("rectangle_mm", numbers(4, "[x0, y0, x1, y1]")),
-        Key("circle_mm", numbers(3, "[x, y, radius]")),
-        Key("polygon_mm", points(3)),
+        *SHAPE_KEYS,
     ), default=[]),
 )
 
@@ -202,33 +206,35 @@ def _grids(listed: list[Values], origin: tuple[float, float], faults: Faults) ->
 
 
 def _keep_outs(listed: list[Values], origin: tuple[float, float], faults: Faults) -> list[KeepOut]:
-    keep_outs = []
-    for values in listed:
-        shape = exactly_one(values, SHAPES, faults)
-        name = values["name"]
-        if shape is None or name is None:
-            continue
-        place = f'keep-out "{name}" {shape}'
-        if shape == "circle_mm":
-            x, y, radius = values[shape]
-            if radius <= 0:
-                faults.add(f"{place} has the radius {radius:g}; give a radius above 0")
-            keep_outs.append(KeepOut(name, None, (x + origin[0], y + origin[1], radius)))
-            continue
-        corners = values[shape]
-        if shape == "rectangle_mm":
-            x0, y0, x1, y1 = corners
-            if x1 <= x0 or y1 <= y0:
-                faults.add(f"{place} is {shown(list(corners))}, which has no positive size; give [x0, y0, x1, y1] with "
-                           "x0 < x1 and y0 < y1")
-                continue
-            corners = np.array([[x0, y0], [x1, y0], [x1, y1], [x0, y1]])
-        fault = polygon_fault(corners)
-        if fault:
-            faults.add(f"{place} {fault}; list the corners in order along its edge")
-        else:
-            keep_outs.append(KeepOut(name, counter_clockwise(corners + np.array(origin))))
-    return keep_outs
+    return [drawn for values in listed if (drawn := drawn_shape(values, "keep-out", origin, faults)) is not None]
+
+
+def drawn_shape(values: Values, what: str, origin: tuple[float, float], faults: Faults) -> KeepOut | None:
+    """The named rectangle, circle or polygon of a table of `SHAPE_KEYS`, in the centred frame; None with a fault added."""
+    shape = exactly_one(values, SHAPES, faults)
+    name = values["name"]
+    if shape is None or name is None:
+        return None
+    place = f'{what} "{name}" {shape}'
+    if shape == "circle_mm":
+        x, y, radius = values[shape]
+        if radius <= 0:
+            faults.add(f"{place} has the radius {radius:g}; give a radius above 0")
+            return None
+        return KeepOut(name, None, (x + origin[0], y + origin[1], radius))
+    corners = values[shape]
+    if shape == "rectangle_mm":
+        x0, y0, x1, y1 = corners
+        if x1 <= x0 or y1 <= y0:
+            faults.add(f"{place} is {shown(list(corners))}, which has no positive size; give [x0, y0, x1, y1] with "
+                       "x0 < x1 and y0 < y1")
+            return None
+        corners = np.array([[x0, y0], [x1, y0], [x1, y1], [x0, y1]])
+    fault = polygon_fault(corners)
+    if fault:
+        faults.add(f"{place} {fault}; list the corners in order along its edge")
+        return None
+    return KeepOut(name, counter_clockwise(corners + np.array(origin)))
 
 
 def _each_file_once(groups: list[Values], faults: Faults) -> None:

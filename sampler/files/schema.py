@@ -123,6 +123,13 @@ def points(least: int) -> Kind:
     return read
 
 
+def flag(value: Any, place: str, faults: Faults) -> bool | None:
+    if isinstance(value, bool):
+        return value
+    faults.add(f"{place} is {shown(value)}; give true or false")
+    return None
+
+
 def text(value: Any, place: str, faults: Faults) -> str | None:
     if isinstance(value, str) and value.strip():
         return value
@@ -153,6 +160,27 @@ def one_of(*allowed: str) -> Kind:
     return read
 
 
+def one_number_of(*allowed: int) -> Kind:
+    def read(value: Any, place: str, faults: Faults) -> int | None:
+        if isinstance(value, int) and not isinstance(value, bool) and value in allowed:
+            return value
+        faults.add(f"{place} is {shown(value)}; give {', '.join(map(str, allowed[:-1]))} or {allowed[-1]}")
+        return None
+    return read
+
+
+def named_numbers(what: str, bounds: Bounds = ANY) -> Kind:
+    """A table of numbers by names that the user chooses, as pairs."""
+    def read(value: Any, place: str, faults: Faults) -> tuple[tuple[str, float], ...] | None:
+        if not isinstance(value, dict):
+            faults.add(f"{place} is {shown(value)}; give a table of {what}")
+            return None
+        one = number(bounds)
+        read_in = {name: one(item, f'{place} "{name}"', faults) for name, item in value.items()}
+        return tuple((name, item) for name, item in read_in.items() if item is not None)
+    return read
+
+
 def format_number(value: Any, place: str, faults: Faults) -> int | None:
     if value == 1 and isinstance(value, int) and not isinstance(value, bool):
         return value
@@ -174,6 +202,7 @@ def table(*keys: Key, others: Kind | None = None) -> Kind:
 def tables(*keys: Key, least: int = 0) -> Kind:
     """A list of tables `[[name]]` as a list of dictionaries, each with its `place` and the keys `present`, for messages."""
     def read(value: Any, place: str, faults: Faults) -> list[Values] | None:
+        place = place.removeprefix("[").replace("] ", ".")
         if not isinstance(value, list) or len(value) < least or not all(isinstance(item, dict) for item in value):
             faults.add(f"{place} is {shown(value)}; give tables [[{place}]]")
             return None

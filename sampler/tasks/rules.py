@@ -12,9 +12,9 @@ from scipy.spatial import KDTree
 from sampler.errors import InputError
 from sampler.optimise.contradiction import Statement, counting, smallest_contradiction
 from sampler.optimise.problem import CountRules
-from sampler.panel.layout import Layout, Sites
+from sampler.panel.layout import EDGE_TOLERANCE_MM, Layout, Sites
 from sampler.panel.region import inside_region
-from sampler.tasks.study import Rules, Study
+from sampler.tasks.study import Rules, Study, ZoneRule
 from sampler.tasks.units import Units
 
 Indices = NDArray[np.int64]
@@ -54,12 +54,20 @@ def unit_rules(study: Study, units: Units) -> UnitRules:
                 rows.append((f"per_cell {grid.name}, cell {grid.cell_label(index)}", units.containing(members),
                              float(cell_rule.least), most))
     for zone in rules.per_zone:
-        members = np.flatnonzero(inside_region(study.layout, "polygon", zone.polygon_mm, sites.xy_mm))
+        members = np.flatnonzero(inside_zone(study.layout, zone, sites.xy_mm))
         rows.append((f'per_zone "{zone.name}"', units.containing(members), float(zone.least),
                      np.inf if zone.most is None else float(zone.most)))
     counts = CountRules(tuple(row[1] for row in rows), np.array([row[2] for row in rows]),
                         np.array([row[3] for row in rows]), tuple(row[0] for row in rows))
     return UnitRules(required, counts)
+
+
+def inside_zone(layout: Layout, zone: ZoneRule, xy_mm: NDArray[np.float64]) -> NDArray[np.bool_]:
+    """Which points (n, 2) lie in a zone, its edge included."""
+    if zone.circle_mm is None:
+        return inside_region(layout, "polygon", zone.polygon_mm, xy_mm)
+    x, y, radius = zone.circle_mm
+    return np.hypot(xy_mm[:, 0] - x, xy_mm[:, 1] - y) <= radius + EDGE_TOLERANCE_MM
 
 
 def check_rules(study: Study, units: Units, found: UnitRules) -> None:

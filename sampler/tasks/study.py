@@ -85,12 +85,16 @@ class CellRule:
 
 @dataclass(frozen=True, slots=True)
 class ZoneRule:
-    """At least `least` and at most `most` sites in a polygon (k, 2), centred panel frame; `most` 0 forbids it."""
+    """At least `least` and at most `most` sites in a polygon (k, 2), centred panel frame; `most` 0 forbids it.
+
+    With `circle_mm` (x, y, radius) the zone is that circle, and the polygon is only to draw.
+    """
 
     name: str
     polygon_mm: NDArray[np.float64]
     least: int = 0
     most: int | None = None
+    circle_mm: tuple[float, float, float] | None = None
 
 
 @dataclass(frozen=True, slots=True)
@@ -138,7 +142,10 @@ class Source:
 
 @dataclass(frozen=True, slots=True)
 class Study:
-    """A study with its layout read in. `limits` in the order of the file."""
+    """A study with its layout read in. `limits` in the order of the file.
+
+    `machine_stated`: the machine is the study's own, so that its seconds mean something.
+    """
 
     title: str
     layout: Layout
@@ -152,6 +159,7 @@ class Study:
     potential: Potential | None = None
     measure: Measure = field(default_factory=Measure)
     machine: Machine = field(default_factory=Machine)
+    machine_stated: bool = False
     source: Source = Source("", "")
     layout_source: Source = Source("", "")
     warnings: tuple[str, ...] = ()
