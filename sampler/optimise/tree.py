@@ -387,6 +387,9 @@ class Tree:
         solution = self.program.solve()
         if solution is not None:
             slack, price, margin, multipliers = self._price(node, solution)
+            if slack > margin:
+                self.proof.append(Step("leaf", multipliers))
+                return
             self._fix(node, slack, price, margin, multipliers)
         half = self._best_split(sites, w) or self.splits.single(sites, w)
         if half is None:
