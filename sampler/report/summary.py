@@ -46,11 +46,11 @@ def audit_summary(result: SiteAudit) -> str:
     """A given site list as text: does it meet the limits, what the fewest plan would need, what to drop or add."""
     audit = result.audit
     missed = _missed(audit)
-    verdict = (f"{len(missed)} of {_count(len(audit.limits), 'limit')} missed" if missed else
+    verdict = (f"{len(missed)} of {counted(len(audit.limits), 'limit')} missed" if missed else
                "every limit met" if audit.limits else "the study sets no limits")
 
     def parts(each: int) -> tuple[list[str], list[str]]:
-        head = [*_wrapped(f"{_count(len(audit.sites), 'listed site')}: {verdict}.", each), _study(result.study),
+        head = [*_wrapped(f"{counted(len(audit.sites), 'listed site')}: {verdict}.", each), _study(result.study),
                 *_candidates(result.candidates, each)]
         tail = [_position(audit, result.study), *_wrapped(_fewest(result), each)]
         if not missed:
@@ -74,12 +74,12 @@ def faults_text(error: SamplerError) -> str:
 
 def progress_line(bound: float, best: float | None, seconds: float) -> str:
     """One line for stderr while the search runs: bound and best count so far."""
-    at_least = f"at least {whole_sites(bound)} sites (bound {_bound(bound)})" if math.isfinite(bound) else "no bound yet"
+    at_least = f"at least {whole_sites(bound)} sites (bound {bound_text(bound)})" if math.isfinite(bound) else "no bound yet"
     found = "none found yet" if best is None or not math.isfinite(best) else f"best so far {best:.0f}"
     return f"{seconds:6.1f} s  {at_least}, {found}"
 
 
-def _count(number: int, noun: str) -> str:
+def counted(number: int, noun: str) -> str:
     return f"{number:,} {noun}" if number == 1 else f"{number:,} {noun}s"
 
 
@@ -102,7 +102,7 @@ def _wrapped(text: str, most: int, first: str = "", later: str = "  ") -> list[s
     return [*lines, begin + plain(line, WIDTH - columns(begin))]
 
 
-def _bound(bound: float) -> str:
+def bound_text(bound: float) -> str:
     """A bound with the digits that show between which whole numbers it lies."""
     nearest = round(bound)
     return str(nearest) if abs(bound - nearest) <= BOUND_TOLERANCE else against(bound, nearest, 4)[0]
@@ -118,21 +118,21 @@ def _missed(audit: Audit) -> list[AuditedLimit]:
 
 def _answer(plan: Plan) -> str:
     answer = plan.answer[0].upper() + plan.answer[1:]
-    bound = f"lower bound {_bound(plan.lower_bound)}" if math.isfinite(plan.lower_bound) else "no lower bound"
+    bound = f"lower bound {bound_text(plan.lower_bound)}" if math.isfinite(plan.lower_bound) else "no lower bound"
     ended = "" if plan.fewest_proven else "; search interrupted" if plan.interrupted else "; search ended before a proof"
-    shown = "" if plan.audit.meets_limits else f" Shown: the best set found, {_count(len(plan.sites), 'site')}."
+    shown = "" if plan.audit.meets_limits else f" Shown: the best set found, {counted(len(plan.sites), 'site')}."
     return f"{answer} ({bound}{ended}).{shown}"
 
 
 def _cannot(plan: Plan) -> str:
     missed = _missed(plan.audit)
-    everything = f"all {_count(len(plan.sites), 'candidate')} measured"
+    everything = f"all {counted(len(plan.sites), 'candidate')} measured"
     if missed:
         verb = "fails" if len(missed) == 1 else "fail"
-        return f"Cannot be met: with {everything}, {len(missed)} of {_count(len(plan.audit.limits), 'limit')} {verb}."
+        return f"Cannot be met: with {everything}, {len(missed)} of {counted(len(plan.audit.limits), 'limit')} {verb}."
     text = f"Cannot be met under the study's rules, although with {everything} every limit is met."
     if plan.study.rules.max_sites is not None and plan.at_least > plan.study.rules.max_sites:
-        text += f" At least {_count(plan.at_least, 'site')} needed, max_sites is {plan.study.rules.max_sites}."
+        text += f" At least {counted(plan.at_least, 'site')} needed, max_sites is {plan.study.rules.max_sites}."
     return text
 
 
@@ -140,12 +140,12 @@ def _candidates(found: Candidates, most: int) -> list[str]:
     """Candidates and, shortly, why the other marks are none."""
     marks, free = len(found.reason), len(found.sites)
     if marks == free:
-        return [f"Candidates: {_count(free, 'mark')}, all that are drawn."]
+        return [f"Candidates: {counted(free, 'mark')}, all that are drawn."]
     reasons = [f"{count:,} {plain(reason, 60)}" for reason, count in found.counts().items()]
     if len(reasons) > MOST_REASONS:
         rest = sum(list(found.counts().values())[MOST_REASONS - 1:])
         reasons = [*reasons[:MOST_REASONS - 1], f"{rest:,} for other reasons"]
-    return _wrapped(f"Candidates: {free:,} of {_count(marks, 'mark')}; not: {', '.join(reasons)}.", most)
+    return _wrapped(f"Candidates: {free:,} of {counted(marks, 'mark')}; not: {', '.join(reasons)}.", most)
 
 
 def _table(audit: Audit, value: str, study: Study, rows: int) -> list[str]:
@@ -214,7 +214,7 @@ def _advice(advice: Sequence[str], most: int) -> list[str]:
 def _warnings(warnings: Sequence[str], most: int) -> list[str]:
     lines = [line for warning in warnings[:MOST_WARNINGS] for line in _wrapped(f"Warning: {warning}", most)]
     if len(warnings) > MOST_WARNINGS:
-        lines.append(f"  and {_count(len(warnings) - MOST_WARNINGS, 'more warning')}")
+        lines.append(f"  and {counted(len(warnings) - MOST_WARNINGS, 'more warning')}")
     return lines
 
 
