@@ -7,8 +7,9 @@ steps on the optimality conditions of
     min costᵀw   subject to   g_l(w) ≥ 1,   rules,   0 ≤ w ≤ 1
 
 (Nesterov & Nemirovskii 1994; the predictor and corrector of Mehrotra 1992) converge in about twenty steps however many
-limits there are, and at the optimum one row for each active limit is the whole proof, by convex duality. Nothing is believed
-of the result: relaxation.py computes the bound from z and y by summation over all sites.
+limits there are, and at the optimum one row for each active limit is the whole proof, by convex duality; a linear program
+to which rows are added, as in the nodes of the tree, needs hundreds for the same bound. Nothing is believed of the result:
+relaxation.py computes the bound from z and y by summation over all sites.
 
 M depends on w through D = Σ_b q_b(q_b+1)/2 numbers, so the Hessian is diagonal plus rank D + rules: a step costs n·D², or
 n³ when D exceeds n.
