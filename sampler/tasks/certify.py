@@ -1,8 +1,8 @@
 """Certify: re-reads what a plan claims and proves it again from study and layout, without the rooms that made it.
 
 Readings and directions are rebuilt here from the contract's table of terms, the audit is recomputed with verified bounds, and
-the proof is walked by `proof_check`. Shared with the planner are only the values read from the files, which marks are
-candidates and what lies in a region (`panel`), and the local field's directions (`uncertainty.field`).
+the proof is walked by `proof_check`. Shared with the planner are only the values read from the files, which marks the panel
+leaves as candidates and what lies in a region (`panel`), and the local field's directions (`uncertainty.field`).
 """
 
 from __future__ import annotations
@@ -11,10 +11,12 @@ import hashlib
 import math
 import re
 from dataclasses import dataclass
+from itertools import combinations
 from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
+from scipy.spatial.distance import pdist
 
 from sampler.errors import CertificateError
 from sampler.panel.candidates import candidates
@@ -85,6 +87,8 @@ def _certify(study: Study, plan: dict[str, Any], certificate: dict[str, Any]) ->
                 raise CertificateError(f"{where}: made from another {name} than {source.path} as it is now; plan again")
     if digest(certificate) != certificate["sha256"] or plan["certificate"]["sha256"] != certificate["sha256"]:
         raise CertificateError("certificate.json: altered since it was written, or not the one of this plan.json")
+    if study.measure.field_of_view_mm is not None or study.search.objective != "sites":
+        raise CertificateError("study: counts stops or seconds; only plans that count sites can be certified so far")
     built = _Built(study)
     rows = _chosen(study, plan, built.sites)
     _check_audit(built, plan, rows)
@@ -117,23 +121,55 @@ def _chosen(study: Study, plan: dict[str, Any], sites: Sites) -> NDArray[np.int6
         raise CertificateError(f'plan.json: site "{unknown[0]}" is not a candidate of this study')
     if len(set(names)) != len(names) or plan["n_sites"] != len(names) or plan["candidates"] != len(sites):
         raise CertificateError("plan.json: n_sites, candidates and the list of sites do not agree")
-    missing = set(study.rules.required) - set(names)
-    banned = set(study.rules.forbidden) & set(names)
-    if missing or banned:
-        raise CertificateError(f'plan.json: site "{min(missing | banned)}" is {"required" if missing else "forbidden"}')
-    if study.rules.max_sites is not None and len(names) > study.rules.max_sites:
-        raise CertificateError(f"plan.json: {len(names)} sites; max_sites is {study.rules.max_sites}")
     rows = np.array([place[name] for name in names], np.int64)
     for site, row in zip(plan["sites"], rows, strict=True):
         written = np.array([site["x_mm"], site["y_mm"]], float) + study.layout.origin_mm
         if not np.abs(written - sites.xy_mm[row]).max() <= 1e-6:
             raise CertificateError(f'plan.json: site "{site["id"]}" is written at another place than the layout\'s')
+    chosen = np.zeros(len(sites), bool)
+    chosen[rows] = True
+    missing = _required(study, sites) & ~chosen
+    if missing.any():
+        raise CertificateError(f'plan.json: required site "{sites.id[np.flatnonzero(missing)[0]]}" is missing')
+    for label, mask, least, most in _counts(study, sites):
+        if not least <= (mask & chosen).sum() <= most:
+            raise CertificateError(f"plan.json: {(mask & chosen).sum()} sites where rule {label} allows {least:g} to {most:g}")
+    spacing = study.rules.min_spacing_mm
+    if spacing is not None and len(rows) > 1 and pdist(sites.xy_mm[rows]).min() < spacing * (1 - 1e-9):
+        raise CertificateError(f"plan.json: two sites are closer than min_spacing_mm {spacing:g}")
     return rows
+
+
+def _required(study: Study, sites: Sites) -> NDArray[np.bool_]:
+    return np.isin(sites.id, study.rules.required) | np.isin(sites.kind, study.rules.required_kinds)
+
+
+def _counts(study: Study, sites: Sites) -> list[tuple[str, NDArray[np.bool_], float, float]]:
+    """(label, sites, least, most) of the rules per cell with candidates, per zone, and on all sites, in this order."""
+    rules, found = study.rules, []
+    for rule in rules.per_cell:
+        grid = study.layout.grid(rule.grid)
+        cell = grid.locate(sites.xy_mm)
+        found += [(f"per_cell {rule.grid}, {grid.cell_label(number)}", cell == number, float(rule.least),
+                   math.inf if rule.most is None else float(rule.most)) for number in range(grid.cells)
+                  if (cell == number).any()]
+    for zone in rules.per_zone:
+        found.append((f'per_zone "{zone.name}"', inside_region(study.layout, "polygon", zone.polygon_mm, sites.xy_mm),
+                      float(zone.least), math.inf if zone.most is None else float(zone.most)))
+    if rules.max_sites is not None:
+        found.append(("max_sites", np.ones(len(sites), bool), 0.0, float(rules.max_sites)))
+    return found
 
 
 def _check_audit(built: _Built, plan: dict[str, Any], rows: NDArray[np.int64]) -> None:
     """Recomputes every term and limit that plan.json states."""
     study, factor = built.study, built.study.coverage_factor
+    for lost in combinations(range(len(rows)), study.rules.lost) if study.rules.lost else ():
+        rest = _Variance(np.delete(built.whitened[rows], lost, axis=0), built.prior)
+        for limit in study.limits:
+            if not built.reached(limit, rest) <= _allowed(limit) * (MEETS if isinstance(limit, TermLimit) else 1 + REGION_SAME):
+                names = " and ".join(str(plan["sites"][site]["id"]) for site in lost)
+                raise CertificateError(f"plan.json: a limit fails when site {names} is lost")
     variance = _Variance(built.whitened[rows], built.prior)
     terms = factor * np.sqrt(variance.upper(np.eye(built.size)[:len(study.model)]))
     for value, written, name in zip(terms, plan["terms"], study.model.names, strict=True):
@@ -143,7 +179,7 @@ def _check_audit(built: _Built, plan: dict[str, Any], rows: NDArray[np.int64]) -
         if isinstance(limit, TermLimit):
             achieved = [(float(terms[study.model.names.index(name)]), limit.maximum, SAME) for name in limit.terms]
         else:
-            achieved = [(factor * built.worst(limit, variance), limit.position_um, REGION_SAME)]
+            achieved = [(built.reached(limit, variance), limit.position_um, REGION_SAME)]
         for value, maximum, tolerance in achieved:
             written = plan["limits"][place]
             place += 1
@@ -153,6 +189,10 @@ def _check_audit(built: _Built, plan: dict[str, Any], rows: NDArray[np.int64]) -
                 raise CertificateError(f"plan.json: limits, {written['label']}: {value:.6g} is above {maximum:g}")
     if place != len(plan["limits"]) or not plan["meets_limits"]:
         raise CertificateError("plan.json: its limits are not those of the study, or it does not claim to meet them")
+
+
+def _allowed(limit: TermLimit | RegionLimit) -> float:
+    return limit.maximum if isinstance(limit, TermLimit) else limit.position_um
 
 
 def _same(where: str, written: float, value: float, tolerance: float) -> None:
@@ -197,7 +237,10 @@ class _Built:
 
     def __init__(self, study: Study) -> None:
         self.study = study
-        self.sites = candidates(study.layout).sites
+        self.rasters: dict[int, tuple[Array, Array]] = {}  # by limit: directions and fixed part at a region's points
+        found, measure = candidates(study.layout).sites, study.measure
+        allowed = ~np.isin(found.id, study.rules.forbidden) & ~np.isin(found.kind, study.rules.forbidden_kinds)
+        self.sites = found.take(np.flatnonzero(allowed & ((measure.side == "both") | (found.side == measure.side))))
         noise, xy = study.noise, self.sites.xy_mm
         self.field: LocalField | None = None
         if noise.local_range_mm and max(noise.local_um) > 0:
@@ -207,7 +250,8 @@ class _Built:
             local = np.sqrt(self.field.neglected(xy))[:, None] * np.asarray(noise.local_um)
         else:
             local = np.zeros(2) if noise.local_range_mm else np.asarray(noise.local_um)
-        self.whitened = self.response(xy, _located(study.layout, xy)) / np.hypot(reading, local)[:, :, None]
+        sigma = np.sqrt(reading**2 + local**2 + np.square(measure.stop_um))
+        self.shared = self._shared()
         deviation = [np.full(len(study.model), np.inf)]
         for prior in study.priors:
             deviation[0][[study.model.names.index(name) for name in prior.terms]] = prior.sd
@@ -215,7 +259,28 @@ class _Built:
             deviation.append(np.full(len(study.potential.terms), study.potential.sd_um))
         if self.field is not None:
             deviation.append(np.ones(2 * self.field.rank))
+        deviation += [np.array(pair) for _, pair in self.shared]
         self.prior = np.diag(1 / np.concatenate(deviation) ** 2)
+        readings = self.response(xy, _located(study.layout, xy))
+        for number, (sides, _) in enumerate(self.shared):
+            at = self.size - 2 * (len(self.shared) - number)
+            readings[:, [0, 1], [at, at + 1]] = np.isin(self.sites.side, sides)[:, None]
+        self.whitened = readings / sigma[:, :, None]
+        rate = self.sites.read_rate.copy()
+        for kind, given in measure.read_rate:
+            rate[(self.sites.kind == kind) & (rate == 1.0)] = given
+        self.expected = self.whitened * np.sqrt(rate)[:, None, None]
+
+    def _shared(self) -> list[tuple[tuple[str, ...], tuple[float, float]]]:
+        """Errors common to all marks of one side, or to all read after turning over: (sides, deviations of dx and dy)."""
+        measure, drawn = self.study.measure, self.study.layout.marks.side
+        sides = [side for side in ("front", "back") if measure.side in ("both", side) and (drawn == side).any()]
+        shared: list[tuple[tuple[str, ...], tuple[float, float]]] = [((side,), measure.side_um) for side in sides
+                                                                     if max(measure.side_um) > 0]
+        second = tuple(side for side in sides if side != self.study.machine.first_side)
+        if len(sides) > 1 and second and max(measure.flip_um) > 0:
+            shared.append((second, measure.flip_um))
+        return shared
 
     @property
     def size(self) -> int:
@@ -240,6 +305,7 @@ class _Built:
             basis = self.field.basis(xy) * (0.0 if correction_only else 1.0)
             for axis in (0, 1):
                 columns += [np.outer(direction, np.eye(2)[axis] * self.field.sigma_um[axis]) for direction in basis.T]
+        columns += [np.zeros((len(xy), 2))] * (2 * len(self.shared))
         return np.stack(columns, axis=2)
 
     def fixed(self, xy: Array, limit: RegionLimit) -> Array:
@@ -248,17 +314,26 @@ class _Built:
             return np.zeros((len(xy), 2))
         return np.sqrt(self.field.neglected(xy))[:, None] * np.asarray(self.field.sigma_um)
 
+    def reached(self, limit: TermLimit | RegionLimit, variance: _Variance) -> float:
+        """k·u of a limit at its worst."""
+        if isinstance(limit, RegionLimit):
+            return self.study.coverage_factor * self.worst(limit, variance)
+        held = np.eye(self.size)[[self.study.model.names.index(name) for name in limit.terms]]
+        return float(self.study.coverage_factor * np.sqrt(variance.upper(held).max()))
+
     def worst(self, limit: RegionLimit, variance: _Variance) -> float:
         """The largest standard uncertainty of dx or dy on a raster of the region."""
-        layout = self.study.layout
-        outline = layout.outline_mm if limit.polygon_mm is None else limit.polygon_mm
-        extent = np.ptp(outline, axis=0).max() / AUDIT_STEPS
-        if limit.region.startswith("cells:"):
-            extent = max(layout.grid(limit.region.removeprefix("cells:")).cell_mm) * 5 / AUDIT_STEPS
-        points = region_points(layout, limit.region, limit.polygon_mm, extent)
-        rows = self.response(points.xy_mm, points.cell, limit.of == "correction").reshape(-1, self.size)
-        squares = variance.upper(rows) + self.fixed(points.xy_mm, limit).ravel() ** 2
-        return float(np.sqrt(squares.max()))
+        if id(limit) not in self.rasters:
+            layout = self.study.layout
+            outline = layout.outline_mm if limit.polygon_mm is None else limit.polygon_mm
+            spacing = np.ptp(outline, axis=0).max() / AUDIT_STEPS
+            if limit.region.startswith("cells:"):
+                spacing = max(layout.grid(limit.region.removeprefix("cells:")).cell_mm) * 5 / AUDIT_STEPS
+            points = region_points(layout, limit.region, limit.polygon_mm, spacing)
+            self.rasters[id(limit)] = (self.response(points.xy_mm, points.cell, limit.of == "correction"),
+                                       self.fixed(points.xy_mm, limit))
+        rows, fixed = self.rasters[id(limit)]
+        return float(np.sqrt((variance.upper(rows.reshape(-1, self.size)) + fixed.ravel() ** 2).max()))
 
     def direction(self, source: int, name: str, xy: Array, axis: int, z: Array) -> Array:
         """c/τ of one row: a term limit's, or a region limit's at a point that must lie in the region.
@@ -286,9 +361,7 @@ class _Built:
 
 
 def _evidence(built: _Built) -> Evidence:
-    study, ids = built.study, built.sites.id
-    n = len(ids)
-    rules = () if study.rules.max_sites is None else ((np.ones(n, bool), 0.0, float(study.rules.max_sites)),)
+    n = len(built.sites)
 
     def directions(rows: dict[str, Any]) -> Array:
         source, axis = np.asarray(rows["source"]).astype(int), np.asarray(rows["axis"]).astype(int)
@@ -298,8 +371,8 @@ def _evidence(built: _Built) -> Evidence:
                  for s, name, at, a, vector in zip(source, rows["term"], xy, axis, z, strict=True)]
         return np.array(found).reshape(-1, built.size)
 
-    return Evidence(built.whitened, built.prior, np.ones(n), np.isin(ids, study.rules.required),
-                    np.isin(ids, study.rules.forbidden), rules, ids, directions)
+    return Evidence(built.expected, built.prior, np.ones(n), _required(built.study, built.sites), np.zeros(n, bool),
+                    tuple(rule[1:] for rule in _counts(built.study, built.sites)), built.sites.id, directions)
 
 
 def _located(layout: Layout, xy: Array) -> dict[str, NDArray[np.int64]]:

@@ -23,7 +23,19 @@ from sampler.tasks.certify import _Built, _term, certify, digest
 from sampler.tasks.proof_check import Evidence, check_proof
 from sampler.tasks.prove import stated
 from sampler.tasks.question import achieved, assumed_of, problem_of, question
-from sampler.tasks.study import Potential, RegionLimit, Rules, Source, Study, TermLimit, TermPrior
+from sampler.tasks.study import (
+    CellRule,
+    Measure,
+    Potential,
+    RegionLimit,
+    Rules,
+    SearchOptions,
+    Source,
+    Study,
+    TermLimit,
+    TermPrior,
+    ZoneRule,
+)
 from sampler.uncertainty.noise import Noise
 
 AFFINE = Model(tuple(ModelTerm(name) for name in FAMILIES["affine"]))
@@ -35,7 +47,12 @@ ALL_TERMS = (TermLimit(SIX, 3.5),)
 
 
 def invented(model=AFFINE, limits=ALL_TERMS, per_side=5, **changes):
-    plain = Study("invented", core_layout(per_side), model, Noise((0.3, 0.4), (0.4, 0.3)), tuple(limits),
+    layout = core_layout(per_side)
+    marks = layout.marks
+    row = np.arange(len(marks))
+    marks = replace(marks, side=np.where(row % 3 == 0, "back", "front"), kind=np.select(
+        [row == 7, row == 9, row % 2 == 0], ["round", "cross", "square"], "plus"))
+    plain = Study("invented", replace(layout, marks=marks), model, Noise((0.3, 0.4), (0.4, 0.3)), tuple(limits),
                   source=Source("study.toml", "a" * 64), layout_source=Source("layout.toml", "b" * 64))
     return replace(plain, **changes)
 
@@ -47,7 +64,8 @@ def planned(study: Study) -> tuple[dict, dict]:
     parts = split(problem)
     relaxed = relax(parts, problem, seconds=60)
     z, limit = relaxed.rows.in_own_terms(problem)
-    certificate = bound_certificate(problem, relaxed.bound, limit, z, relaxed.duals)
+    rules = tuple((int(rule), -float(relaxed.rule_duals[rule])) for rule in np.flatnonzero(relaxed.rule_duals))
+    certificate = bound_certificate(problem, relaxed.bound, limit, z, relaxed.duals, rules)
     bound, count = relaxed.bound, math.ceil(relaxed.bound - 1e-6)
     while True:
         decision = decide(parts, problem, count, rows=relaxed.rows, weights=relaxed.weights)
@@ -93,6 +111,11 @@ STUDIES = {
                           potential=Potential(Model((ModelTerm("dx_xy"), ModelTerm("dy_x2"))), 0.3)),
     "field": invented(limits=(RegionLimit("panel", 1.6, of="displacement"),), per_side=6,
                       noise=Noise((0.3, 0.4), (0.4, 0.3), 300.0)),
+    "zones": invented(rules=Rules(required_kinds=("round",), forbidden_kinds=("cross",), per_zone=(
+        ZoneRule("left", np.array([[-250.0, -250], [-50, -250], [-50, 250], [-250, 250]]), least=2, most=3),),
+        per_cell=(CellRule("exposure", most=2),))),
+    "sides": invented(measure=Measure(side_um=(0.2, 0.1), flip_um=(0.3, 0.3), stop_um=(0.1, 0.0),
+                                      read_rate=(("square", 0.9),))),
     "cells": with_shots(model=CELL_SCALE, limits=(RegionLimit("cells:shot", 2.2), TermLimit(SIX, 4.0)), per_side=8),
 }
 
@@ -141,7 +164,7 @@ def test_own_table_of_terms_agrees_with_the_model(rng):
         _term("dx_z", xy, np.ones(2))
 
 
-@pytest.mark.parametrize("name", ["potential", "field", "priors", "cells"])
+@pytest.mark.parametrize("name", ["potential", "field", "priors", "cells", "sides"])
 def test_rebuilt_readings_and_priors_agree_with_the_planner(name):
     built, asked = _Built(STUDIES[name]), question(STUDIES[name])
     assert built.whitened == pytest.approx(asked.whitened, rel=1e-12, abs=1e-12)
@@ -149,6 +172,15 @@ def test_rebuilt_readings_and_priors_agree_with_the_planner(name):
 
 
 # -- refusals ---------------------------------------------------------------------------------------------------------
+
+
+def test_what_counts_stops_or_seconds_is_not_certified(made):
+    plan, certificate = result(made, "term limits")
+    study = STUDIES["term limits"]
+    for other in (replace(study, measure=Measure(field_of_view_mm=(5.0, 5.0))),
+                  replace(study, search=SearchOptions(objective="seconds"))):
+        with pytest.raises(CertificateError, match="stops or seconds"):
+            certify(other, plan, certificate)
 
 
 def test_another_study_or_layout_is_refused(made):
@@ -195,8 +227,12 @@ def test_rules_are_held_against_the_plan(made):
     plan, certificate = result(made, "term limits")
     chosen, other = plan["sites"][0]["id"], next(f"E-{i}" for i in range(1, 25) if f"E-{i}" not in
                                                  {site["id"] for site in plan["sites"]})
-    for rules in (Rules(forbidden=(chosen,)), Rules(required=(other,)), Rules(max_sites=plan["n_sites"] - 1)):
-        with pytest.raises(CertificateError, match=r"forbidden|required|max_sites"):
+    zone = ZoneRule("whole", np.array([[-250.0, -250], [250, -250], [250, 250], [-250, 250]]), most=plan["n_sites"] - 1)
+    for rules, word in ((Rules(forbidden=(chosen,)), "not a candidate"), (Rules(required=(other,)), "required"),
+                        (Rules(max_sites=plan["n_sites"] - 1), "max_sites"), (Rules(per_zone=(zone,)), 'per_zone "whole"'),
+                        (Rules(per_cell=(CellRule("exposure", most=0),)), "per_cell exposure, c"),
+                        (Rules(min_spacing_mm=200.0), "min_spacing_mm"), (Rules(lost=1), "is lost")):
+        with pytest.raises(CertificateError, match=word):
             certify(replace(STUDIES["term limits"], rules=rules), plan, certificate)
 
 
