@@ -19,7 +19,7 @@ MUTATIONS = [
     ("study", "layout =", "layuot =", 'layuot is not a known key; did you mean "layout"?'),
     ("study", "mark_um", "mark_sigma", 'did you mean "mark_um"?'),
     ("study", "seed = 3", "sed = 3", '[search] sed is not a known key; did you mean "seed"?'),
-    ("study", "seed = 3", "zebra = 3", "[search] zebra is not a known key; the keys are seconds, seed"),
+    ("study", "seed = 3", "zebra = 3", "[search] zebra is not a known key; the keys are seconds, seed, objective"),
     ("study", "seed = 3", "seed = 3.5", "[search] seed is 3.5; give a whole number of at least 0"),
     ("study", "seconds = 5", 'seconds = "5"', '[search] seconds is the text "5"; give a finite number above 0'),
     ("study", "seconds = 5", "seconds = true", "[search] seconds is true; give a finite number above 0"),
@@ -69,6 +69,47 @@ MUTATIONS = [
     ("study", "[search]", "[search", "study.toml: this is not TOML: "),
     ("study", "panel.toml", "panle.toml", "panle.toml: there is no such file; give the path of a layout file (TOML)"),
     ("study", "layouts/panel.toml", "layouts", "layouts: this is a folder; give the path of a layout file (TOML) in it"),
+    ("study", STUDY[STUDY.index("[[limit]]"):STUDY.index("[rules]")], "", "limit is missing; give at least one table [[limit]], or a number of sites in [search] sites"),
+    # how a panel is measured
+    ("study", "[rules]", '[measure]\nside = "top"\n[rules]', '[measure] side is the text "top"; give "front" or "back" or "both"'),
+    ("study", "[rules]", "[measure]\nfield_of_view_mm = [2, 0]\n[rules]", "[measure] field_of_view_mm is [2, 0]; give [width, height], 2 finite numbers above 0"),
+    ("study", "[rules]", "[measure]\nstop_um = [-0.1, 0]\n[rules]", "[measure] stop_um is [-0.1, 0]; give [x, y], 2 finite numbers of at least 0"),
+    ("study", "[rules]", "[measure]\nflip_um = 1\n[rules]", "[measure] flip_um is 1; give [x, y]"),
+    ("study", "[rules]", "[measure]\nread_rate = 0.9\n[rules]", "[measure] read_rate is 0.9; give a table of kinds of marks"),
+    ("study", "[rules]", '[measure.read_rate]\n"" = 1.5\n[rules]', '[measure] read_rate "" is 1.5; give a finite number above 0 and of at most 1'),
+    ("study", "[rules]", "[measure.read_rate]\nhole = 0.9\n[rules]", '[measure] read_rate "hole" is not a kind of any mark; the marks have no kinds'),
+    ("study", "[rules]", "[machine]\nspeed_mm_s = 300\n[rules]", "[machine] speed_mm_s is 300; give [x, y]"),
+    ("study", "[rules]", "[machine]\nspeed = 300\n[rules]", '[machine] speed is not a known key; did you mean "speed_mm_s"?'),
+    ("study", "[rules]", "[machine]\nsettling_s = -1\n[rules]", "[machine] settling_s is -1; give a finite number of at least 0"),
+    ("study", "[rules]", '[machine]\norigin = "upper"\n[rules]', '[machine] origin is the text "upper"; did you mean "upper-'),
+    ("study", "[rules]", "[machine]\nrotation = 45\n[rules]", "[machine] rotation is 45; give 0, 90, 180 or 270"),
+    ("study", "[rules]", '[machine]\nmirrored = "yes"\n[rules]', '[machine] mirrored is the text "yes"; give true or false'),
+    ("study", "[rules]", '[machine]\nflip_axis = "z"\n[rules]', '[machine] flip_axis is the text "z"; give "x" or "y"'),
+    # rules
+    ("study", "max_sites = 60", 'required_kinds = ["hole"]', '[rules] required_kinds "hole" is not a kind of any mark; the marks have no kinds'),
+    ("study", "max_sites = 60", 'required_kinds = [""]', "[rules] required_kinds is [an empty text]; give a list of texts"),
+    ("study", "max_sites = 60", "lost = 3", "[rules] lost is 3; give a whole number of at least 0 and of at most 2"),
+    ("study", "max_sites = 60", "min_spacing_mm = 0", "[rules] min_spacing_mm is 0; give a finite number above 0"),
+    ("study", "max_sites = 60", "max_seconds = 60", "[rules] max_seconds needs the machine's speeds and times; add a table [machine]"),
+    ("study", "max_sites = 60", 'per_cell = {grid = "exposre", min = 1}', '[[rules.per_cell]] grid "exposre" is not a grid of the layout; did you mean "exposure"?'),
+    ("study", "max_sites = 60", 'per_cell = {grid = "exposure"}', "[[rules.per_cell]] has neither min nor max; give at least one"),
+    ("study", "max_sites = 60", 'per_cell = {grid = "exposure", min = 2, max = 1}', "[[rules.per_cell]] min is 2 and max is 1; give a max of at least min"),
+    ("study", "max_sites = 60", "per_cell = {min = 1}", "[[rules.per_cell]] grid is missing; give the name of a grid"),
+    ("study", "max_sites = 60", 'per_cell = {grid = "exposure", min = -1}', "[[rules.per_cell]] min is -1; give a whole number of at least 0"),
+    ("study", "[search]", '[[rules.per_zone]]\nname = "a"\nmin = 1\n[search]', "[[rules.per_zone]] has none of rectangle_mm, circle_mm, polygon_mm"),
+    ("study", "[search]", '[[rules.per_zone]]\nname = "a"\nmin = 1\ncircle_mm = [0, 0, 0]\n[search]', 'zone "a" circle_mm has the radius 0; give a radius above 0'),
+    ("study", "[search]", f'[[rules.per_zone]]\nname = "a"\nmin = 1\npolygon_mm = {CROSSED}\n[search]', 'zone "a" polygon_mm crosses or touches itself'),
+    ("study", "[search]", '[[rules.per_zone]]\nmin = 1\ncircle_mm = [0, 0, 9]\n[search]', "[[rules.per_zone]] name is missing; give a name for the zone"),
+    # search
+    ("study", "seed = 3", 'objective = "time"', '[search] objective is the text "time"; give "sites" or "seconds"'),
+    ("study", "seed = 3", 'objective = "seconds"', '[search] objective "seconds" needs the machine\'s speeds and times; add a table [machine]'),
+    ("study", "seed = 3", 'prefer = "time"', '[search] prefer "time" needs the machine'),
+    ("study", "seed = 3", "information_loss = 0.9", "[search] information_loss is 0.9; give a finite number of at least 0 and of at most 0.5"),
+    ("study", "seed = 3", "sites = 70", "[search] sites is 70, but [rules] max_sites is 60; change one of them"),
+    ("study", "seed = 3", 'sites = 7\nobjective = "seconds"\n[machine]', '[search] has sites and objective "seconds"; give one of them'),
+    # process
+    ("study", "coverage_factor = 3.0", 'process = "gone.toml"', "gone.toml: there is no such file; give the path of a file that `characterise` wrote"),
+    ("study", "coverage_factor = 3.0", "process = 3", "process is 3; give a text"),
     # layout
     ("layout", "width_mm = 510.0", "width_mm = -510.0", "[panel] width_mm is -510; give a finite number above 0"),
     ("layout", "width_mm = 510.0", "widht_mm = 510.0", '[panel] widht_mm is not a known key; did you mean "width_mm"?'),
@@ -127,7 +168,7 @@ def test_fault(tmp_path, file, old, new, phrase):
     assert [fault for fault in faults if phrase in fault], faults
     assert len(faults) <= 3  # what follows from one fault is not listed as faults of its own
     name = {"study": "study.toml", "layout": "panel.toml", "marks": "marks.csv"}[file]
-    assert any(name in fault or "layouts" in fault for fault in faults)
+    assert any(name in fault or "layouts" in fault or "gone" in fault for fault in faults)
     assert all("; " in fault or "and " in fault for fault in faults)  # what was found; what to do
 
 
@@ -250,3 +291,124 @@ def read_warnings(path):
     faults = Faults(str(path))
     layout_file(path.parent / "layouts" / "panel.toml", faults)
     return faults.warnings
+
+
+PROCESS = """format = 1
+[noise]
+mark_um = [0.11, 0.12]
+local_um = [0.2, 0.3]
+local_range_mm = 90.0
+[model]
+panel = ["affine"]
+[model.exposure]
+each = ["translation"]
+[[prior]]
+terms = ["exposure[c1r1].translation_x"]
+sd = 0.3
+mean = 0.1
+[[prior]]
+terms = ["dx_x2"]
+sd = 0.3
+[[read_rate]]
+kind = ""
+rate = 0.97
+interval = [0.95, 0.99]
+[variation]
+panels = 3
+"""
+
+
+def with_process(folder, process=PROCESS, study=STUDY):
+    (folder / "process.toml").write_text(process, encoding="utf-8")
+    return write_study(folder, study.replace("coverage_factor = 3.0", 'process = "process.toml"', 1))
+
+
+def test_a_process_file_says_what_the_study_does_not(tmp_path):
+    bare = STUDY.replace(STUDY[STUDY.index("[model]"):STUDY.index("[[limit]]")], "")
+    study = read_study(with_process(tmp_path, study=bare))
+    assert (study.noise.mark_um, study.noise.local_range_mm) == ((0.11, 0.12), 90.0)
+    assert study.model.names[:2] == ("translation_x", "translation_y")
+    assert len(study.model) == 6 + 2 * 16
+    assert [(prior.terms, prior.sd, prior.mean) for prior in study.priors] == [(("exposure[c1r1].translation_x",), 0.3, 0.1)]
+    assert study.measure.read_rate == (("", 0.97),)
+    assert study.warnings == ()
+    changed = read_study(with_process(tmp_path, PROCESS.replace("0.11", "0.10"), bare))
+    assert changed.source.sha256 != study.source.sha256
+
+
+def test_the_studys_own_keys_win_over_the_process_file(tmp_path):
+    own = STUDY.replace("[noise]\nmark_um = [0.25, 0.3]\n", "[noise]\n") + (
+        '[measure.read_rate]\n"" = 0.5\n[[prior]]\nterms = "scale_x"\nsd = 2.0\n')
+    study = read_study(with_process(tmp_path, study=own))
+    assert (study.noise.mark_um, study.noise.local_um, study.noise.local_range_mm) == ((0.11, 0.12), (0.4, 0.5), 90.0)
+    assert "dx_xy" in study.model.names
+    assert "exposure.rotation" in study.model.names
+    assert [prior.terms for prior in study.priors] == [("scale_x",)]
+    assert study.measure.read_rate == (("", 0.5),)
+
+
+def test_correlated_distortion_taken_as_white_is_warned_of(tmp_path):
+    own = STUDY.replace("local_um = [0.4, 0.5]", "local_um = [0.4, 0.5]\nlocal_range_mm = 0")
+    (warning,) = read_study(with_process(tmp_path, study=own)).warnings
+    assert "alike over 90 mm" in warning
+    assert "undercounts sites severalfold" in warning
+
+
+@pytest.mark.parametrize(("old", "new", "phrase"), [
+    ("mark_um = [0.11, 0.12]", "mark_um = [0.11]", "process.toml: [noise] mark_um is [0.11]"),
+    ("rate = 0.97", "rate = 0", "process.toml: [[read_rate]] rate is 0; give a finite number above 0 and of at most 1"),
+    ('kind = ""', "kind = 3", "process.toml: [[read_rate]] kind is 3; give a text"),
+    ("[noise]", "[noises]", 'process.toml: noises is not a known key; did you mean "noise"?'),
+])
+def test_faults_of_a_process_file(tmp_path, old, new, phrase):
+    bare = STUDY.replace(STUDY[STUDY.index("[noise]"):STUDY.index("[[limit]]")], "")
+    faults = faults_of(with_process(tmp_path, PROCESS.replace(old, new, 1), bare))
+    assert [fault for fault in faults if phrase in fault], faults
+    assert len(faults) == 1
+
+
+def test_everything_that_may_be_said_of_measuring(tmp_path):
+    text = STUDY.replace('required = ["E-c1r1-1"]\nforbidden = ["E-c2r2-4"]\nmax_sites = 60\n', """max_seconds = 80
+min_spacing_mm = 20.0
+lost = 1
+[[rules.per_cell]]
+grid = "exposure"
+min = 1
+[[rules.per_zone]]
+name = "middle"
+circle_mm = [0, 0, 100]
+max = 4
+[[rules.per_zone]]
+name = "left"
+rectangle_mm = [-250, -250, 0, 250]
+min = 2
+""").replace("seed = 3", 'prefer = "time"\ninformation_loss = 0.01') + """
+[machine]
+speed_mm_s = [300, 400]
+read_s = 0.3
+start_mm = [0, 0]
+origin = "upper-left"
+rotation = 180
+mirrored = true
+[measure]
+side = "front"
+field_of_view_mm = [12, 10]
+stop_um = [0.1, 0.1]
+"""
+    study = read_study(write_study(tmp_path, text))
+    assert (study.rules.max_seconds, study.rules.min_spacing_mm, study.rules.lost) == (80.0, 20.0, 1)
+    assert [(rule.grid, rule.least, rule.most) for rule in study.rules.per_cell] == [("exposure", 1, None)]
+    middle, left = study.rules.per_zone
+    assert (middle.name, middle.circle_mm, middle.least, middle.most) == ("middle", (0.0, 0.0, 100.0), 0, 4)
+    assert left.polygon_mm.tolist() == [[-250, -250], [0, -250], [0, 250], [-250, 250]]
+    assert (study.search.prefer, study.search.information_loss) == ("time", 0.01)
+    assert (study.machine.speed_mm_s, study.machine.read_s, study.machine.flip_s) == ((300.0, 400.0), 0.3, 20.0)
+    assert (study.machine.origin, study.machine.rotation, study.machine.mirrored) == ("upper-left", 180, True)
+    assert study.machine_stated
+    assert (study.measure.side, study.measure.field_of_view_mm, study.measure.stop_um) == ("front", (12.0, 10.0), (0.1, 0.1))
+
+
+def test_a_fixed_number_of_sites_needs_no_limit(tmp_path):
+    text = STUDY.replace(STUDY[STUDY.index("[[limit]]"):STUDY.index("[rules]")], "").replace("seed = 3", "sites = 12")
+    study = read_study(write_study(tmp_path, text))
+    assert (study.limits, study.search.sites) == ((), 12)
