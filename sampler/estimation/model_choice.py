@@ -7,12 +7,14 @@ drop out cell by cell.
 
 from __future__ import annotations
 
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
+from scipy.spatial import cKDTree
 from scipy.special import fdtrc
 
+from sampler.estimation.least_squares import Factored
 from sampler.estimation.readings import Averages, Pattern, Readings
 from sampler.model.basis import Model, ModelTerm, design_blocks, places
 from sampler.model.terms import FAMILIES
@@ -29,6 +31,8 @@ SHARED = ("scale_x", "scale_y", "rotation", "orthogonality")
 EACH = FAMILIES["similarity"]
 """Terms tried for a grid: those that all its cells share, and those that each cell has of its own."""
 LEAST_CELLS = 4
+SURE = 3.0
+"""Steps between cells are believed from this many standard errors on."""
 BLOCKS = 4
 """Without a grid, whole blocks of the panel are left out, BLOCKS × BLOCKS of them."""
 QUARTERS = 4
@@ -172,17 +176,56 @@ class _Tried(list[Rung]):
 
 def _own_terms(layout: Layout, readings: Readings, patterns: list[Pattern], sigma_um: tuple[float, float], tried: _Tried,
                without: Rung) -> bool:
-    """Whether terms of single cells predict left-out quarters better, by more than one standard error from cell to
-    cell, while those of cells drawn half a pitch beside the real ones do not: smooth local distortion favours any
-    cells, steps between real cells spoil the others."""
+    """Whether terms of single cells predict left-out quarters better by more than one standard error from cell to cell,
+    and there are steps between cells: smooth local distortion favours the terms of any cells, but steps only real ones
+    make."""
     gain, error = tried.gain(without)
     if gain <= error:
         return False
-    grid = layout.grid(tried.grid)
-    centre = (grid.centre_mm[0] + grid.pitch_mm[0] / 2, grid.centre_mm[1] + grid.pitch_mm[1] / 2)
-    moved = replace(layout, grids=tuple(replace(grid, centre_mm=centre) if other is grid else other for other in layout.grids))
-    beside, _ = _tried(moved, readings, patterns, np.asarray(sigma_um), tried.grid, (without.family,)).gain(without)
-    return beside < 0
+    shared = (tried.grid,) if without.shared else ()
+    excess, error = _steps(layout, readings, patterns, np.asarray(sigma_um), model_of(without.family, layout, shared), tried.grid)
+    return excess > SURE * error
+
+
+def _steps(layout: Layout, readings: Readings, patterns: list[Pattern], sigma: Array, model: Model,
+           grid: str) -> tuple[float, float]:
+    """How much more two close marks in neighbouring cells differ than two in one cell at the same distance: the mean
+    excess of half the squared difference (in units of the noise), and its standard error from border to border.
+
+    What marks of one cell do at a distance is a parabola in the distance.
+    """
+    at = places(layout, readings.sites.xy_mm)
+    blocks, cell = design_blocks(model, at), at.cell[grid]
+    pairs, distance, half = [], [], []
+    for pattern in patterns:
+        weight = sigma[pattern.axis]
+        q = Factored.of(pattern.of(blocks) / weight[:, None]).q
+        y = pattern.y / weight
+        flat = np.full((len(y), 2 * len(pattern.site)), np.nan)
+        flat[:, pattern.seen] = y - (y @ q) @ q.T
+        residual = flat.reshape(len(y), -1, 2)
+        near = cKDTree(at.xy_mm[pattern.site]).query_pairs(min(layout.grid(grid).cell_mm) / 2, output_type="ndarray")
+        squares = (residual[:, near[:, 0]] - residual[:, near[:, 1]]) ** 2 / 2
+        known = ~np.isnan(squares)
+        count = known.sum(axis=(0, 2))
+        some = np.flatnonzero(count)
+        half.append(np.where(known, squares, 0.0).sum(axis=(0, 2))[some] / count[some])
+        pairs.append(np.sort(cell[pattern.site[near[some]]], axis=1))
+        ends = at.xy_mm[pattern.site[near[some]]]
+        distance.append(np.linalg.norm(ends[:, 0] - ends[:, 1], axis=1))
+    pair, d, h = np.concatenate(pairs), np.concatenate(distance), np.concatenate(half)
+    inside = pair[:, 0] >= 0
+    own, other = inside & (pair[:, 0] == pair[:, 1]), inside & (pair[:, 0] != pair[:, 1])
+    if own.sum() < 10 or other.sum() < 10:
+        return 0.0, np.inf
+    curve = np.polynomial.Polynomial.fit(d[own], h[own], 2)
+    other &= (d >= d[own].min() - 1e-6) & (d <= d[own].max() + 1e-6)
+    _, border = np.unique(pair[other], axis=0, return_inverse=True)
+    count = np.bincount(border.ravel())
+    if len(count) < LEAST_CELLS:
+        return 0.0, np.inf
+    mean = np.bincount(border.ravel(), h[other] - curve(d[other])) / count
+    return float(mean.mean()), float(mean.std(ddof=1) / np.sqrt(len(mean)))
 
 
 @dataclass(frozen=True, slots=True)
@@ -255,10 +298,9 @@ def _fit(zz: Array, zy: Array, panel: Codes, own: Codes) -> tuple[Array, Array, 
     return theta, alone, rank + float(found)
 
 
-def _tried(layout: Layout, readings: Readings, patterns: list[Pattern], sigma: Array, grid: str,
-           families: tuple[str, ...] = tuple(LADDER)) -> _Tried:
+def _tried(layout: Layout, readings: Readings, patterns: list[Pattern], sigma: Array, grid: str) -> _Tried:
     """Every rung with and without the shared and single cells' terms of one grid ("" for none)."""
-    names = list(dict.fromkeys(name for family in families for name in panel_terms(family)))
+    names = list(dict.fromkeys(name for family in LADDER for name in panel_terms(family)))
     terms = [ModelTerm(name) for name in names]
     if grid:
         terms += [ModelTerm(name, grid) for name in (*SHARED, *EACH)]
@@ -267,7 +309,7 @@ def _tried(layout: Layout, readings: Readings, patterns: list[Pattern], sigma: A
     own = np.arange(len(names) + len(SHARED), len(terms))
     cell, quarter, cells = _cells(layout, at.xy_mm, at.cell.get(grid), at.local_mm.get(grid))
     variants = [(False, False)] + ([(True, False), (False, True), (True, True)] if grid else [])
-    keys = [(family, shared, each) for shared, each in variants for family in families]
+    keys = [(family, shared, each) for shared, each in variants for family in LADDER]
     left = {key: np.zeros((cells, 2)) for key in keys}  # squared errors at left-out cells, quarters
     squares = {key: np.zeros(2) for key in keys}
     rank = dict.fromkeys(keys, 0.0)
@@ -338,8 +380,8 @@ def _rungs(keys: list[Key], left: dict[Key, Array], squares: dict[Key, Array], r
         residual = sigma * np.sqrt(np.divide(squares[key], dof * share, out=np.full(2, np.nan), where=dof * share > 0))
         order = list(LADDER).index(family)
         f = f_p = np.nan
-        below = (list(LADDER)[order - 1], shared, each)
-        if order and below in rank and dof > 0:
+        if order and dof > 0:
+            below = (list(LADDER)[order - 1], shared, each)
             more = rank[key] - rank[below]
             if more > 0:
                 f = float((squares[below].sum() - squares[key].sum()) / more / (squares[key].sum() / dof))

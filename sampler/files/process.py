@@ -20,8 +20,8 @@ def process_toml(result: Characterisation) -> str:
     and `[variation]`, the covariances of terms between panels of a lot and between lots, for planning lots."""
     readings, noise = result.readings, result.noise
     lines = [f"# What {len(result.panel)} pilot panels said; written by sampler {__version__}.", "format = 1", "",
-             *(f"# {note}" for note in (*result.choice.reason, *result.notes)), "", "[noise]", f"mark_um = {_list(noise.mark_um)}",
-             f"local_um = {_list(noise.local_um)}"]
+             *(f"# {note}" for note in (*result.choice.reason, *result.notes)), "", "[noise]",
+             f"mark_um = {_list(noise.mark_um)}", f"local_um = {_list(noise.local_um)}"]
     if noise.local_range_mm:
         lines.append(f"local_range_mm = {_number(noise.local_range_mm)}")
     lines += ["", "[model]", f"panel = {_texts(LADDER[result.choice.family])}"]

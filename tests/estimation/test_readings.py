@@ -65,7 +65,7 @@ def test_marks_by_place(rng):
 def test_sides_at_one_place_are_different_marks(rng):
     xy = lattice(2, 1, 100.0, 0.0)
     both = Sites.at(np.array(["F1", "F2", "B1", "B2"]), np.tile(xy, (2, 1)))
-    both = Sites(both.id, both.xy_mm, np.array(["front"] * 2 + ["back"] * 2), both.kind, both.sigma_um, both.read_rate, both.seconds)
+    both = replace(both, side=np.array(["front"] * 2 + ["back"] * 2))
     readings = Readings.of(replace(LAYOUT, marks=both), ["P"] * 3, rng.normal(size=(3, 2)), xy_mm=xy[[0, 1, 1]],
                            side=["back", "front", "back"])
     assert readings.sites.id[readings.site].tolist() == ["B1", "F2", "B2"]
@@ -82,7 +82,8 @@ def test_unknown_ids_are_named_and_left_out(rng):
 def test_every_fault_is_told_together():
     with pytest.raises(InputError) as error:
         Readings.of(LAYOUT, ["P", "Q"], np.array([[np.inf, 0.0], [0.0, 0.0]]), lot=["L"])
-    assert len(error.value.faults) == 3 and "no marks are named" in str(error.value) and "lot has 1 rows, panel 2" in str(error.value)
+    assert len(error.value.faults) == 3
+    assert "no marks are named" in str(error.value) and "lot has 1 rows, panel 2" in str(error.value)
     with pytest.raises(InputError, match="no rows"):
         Readings.of(LAYOUT, [], np.zeros((0, 2)), id=[])
     with pytest.raises(InputError, match="no reading is of a mark"):
@@ -96,9 +97,9 @@ def test_order_of_rows_changes_nothing(rng):
     panel, site, dxy = rng.integers(0, 3, n).astype(str), rng.integers(0, 9, n), rng.normal(size=(n, 2))
     order = np.concatenate([[int(np.flatnonzero(panel == name)[0]) for name in dict.fromkeys(panel)], np.arange(n)])
     order = np.array(list(dict.fromkeys(order.tolist())))
-    rest = rng.permutation(order[3:])
+    order = np.r_[order[:3], rng.permutation(order[3:])]
     one = Readings.of(LAYOUT, panel, dxy, id=IDS[site]).averaged()
-    other = Readings.of(LAYOUT, panel[np.r_[order[:3], rest]], dxy[np.r_[order[:3], rest]], id=IDS[site[np.r_[order[:3], rest]]]).averaged()
+    other = Readings.of(LAYOUT, panel[order], dxy[order], id=IDS[site[order]]).averaged()
     assert other.dxy_um == pytest.approx(one.dxy_um, rel=1e-12) and (other.count == one.count).all()
 
 
@@ -108,7 +109,7 @@ def test_read_rates_with_wilsons_interval(rng):
     assert wilson(0, 20)[0] == 0.0 and wilson(20, 20)[1] == 1.0
     marks = LAYOUT.marks
     kinds = np.where(np.arange(25) < 10, "cross", "ring")
-    layout = replace(LAYOUT, marks=Sites(marks.id, marks.xy_mm, marks.side, kinds, marks.sigma_um, marks.read_rate, marks.seconds))
+    layout = replace(LAYOUT, marks=replace(marks, kind=kinds))
     dxy = np.zeros((25, 2))
     dxy[[0, 1], 0], dxy[20, 1] = np.nan, np.nan
     rates = read_rates(Readings.of(layout, ["P"] * 25, dxy, id=IDS))

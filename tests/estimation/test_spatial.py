@@ -87,7 +87,8 @@ def test_variogram_by_pairs(rng):
     assert (found.distance_mm * found.pairs).sum() == pytest.approx(sum(d for d, _ in kept))
 
 
-@pytest.mark.parametrize(("family", "reach", "order"), [("smooth", 60.0, 1), ("smooth", 60.0, 3), ("smooth", 150.0, 2), ("rough", 60.0, 1)])
+@pytest.mark.parametrize(("family", "reach", "order"), [("smooth", 60.0, 1), ("smooth", 60.0, 3), ("smooth", 150.0, 2),
+                                                         ("rough", 60.0, 1)])
 def test_known_fields_are_found_again(rng, family, reach, order):
     """The mean over pilots is right although the fit has taken part of the field away (naively, order 3 halves a range of 60)."""
     found = []
