@@ -20,7 +20,8 @@ from sampler.optimise.search import search
 
 # name, side of the grid, order, evenly spread sites, region points a side, seconds for the bound, for the search
 ROWS = [
-    ("324 × 12, terms", 18, 2, 31.0, 0, 0.2, 1.0),
+    ("324 × 12, terms", 18, 2, 32.02, 0, 0.2, 1.0),
+    ("324 × 12, terms, bound nearly whole", 18, 2, 31.0, 0, 0.2, 1.0),
     ("10,404 × 20, terms", 102, 3, 43.5, 0, 3.0, 10.0),
     ("324 × 12, 882 region rows", 18, 2, 50.0, 21, 0.2, None),
     ("10,404 × 20, 3,362 region rows", 102, 3, 108.0, 41, 3.0, None),
