@@ -111,9 +111,9 @@ STUDIES = {
                           potential=Potential(Model((ModelTerm("dx_xy"), ModelTerm("dy_x2"))), 0.3)),
     "field": invented(limits=(RegionLimit("panel", 1.6, of="displacement"),), per_side=6,
                       noise=Noise((0.3, 0.4), (0.4, 0.3), 300.0)),
-    "zones": invented(rules=Rules(required_kinds=("round",), forbidden_kinds=("cross",), per_zone=(
+    "zones": with_shots(rules=Rules(required_kinds=("round",), forbidden_kinds=("cross",), per_zone=(
         ZoneRule("left", np.array([[-250.0, -250], [-50, -250], [-50, 250], [-250, 250]]), least=2, most=3),),
-        per_cell=(CellRule("exposure", most=2),))),
+        per_cell=(CellRule("shot", most=3),))),
     "sides": invented(measure=Measure(side_um=(0.2, 0.1), flip_um=(0.3, 0.3), stop_um=(0.1, 0.0),
                                       read_rate=(("square", 0.9),))),
     "cells": with_shots(model=CELL_SCALE, limits=(RegionLimit("cells:shot", 2.2), TermLimit(SIX, 4.0)), per_side=8),
@@ -227,13 +227,14 @@ def test_rules_are_held_against_the_plan(made):
     plan, certificate = result(made, "term limits")
     chosen, other = plan["sites"][0]["id"], next(f"E-{i}" for i in range(1, 25) if f"E-{i}" not in
                                                  {site["id"] for site in plan["sites"]})
+    study = replace(STUDIES["term limits"], layout=replace(STUDIES["term limits"].layout, grids=(shots(),)))
     zone = ZoneRule("whole", np.array([[-250.0, -250], [250, -250], [250, 250], [-250, 250]]), most=plan["n_sites"] - 1)
     for rules, word in ((Rules(forbidden=(chosen,)), "not a candidate"), (Rules(required=(other,)), "required"),
                         (Rules(max_sites=plan["n_sites"] - 1), "max_sites"), (Rules(per_zone=(zone,)), 'per_zone "whole"'),
-                        (Rules(per_cell=(CellRule("exposure", most=0),)), "per_cell exposure, c"),
+                        (Rules(per_cell=(CellRule("shot", most=0),)), "per_cell shot, c"),
                         (Rules(min_spacing_mm=200.0), "min_spacing_mm"), (Rules(lost=1), "is lost")):
         with pytest.raises(CertificateError, match=word):
-            certify(replace(STUDIES["term limits"], rules=rules), plan, certificate)
+            certify(replace(study, rules=rules), plan, certificate)
 
 
 def leaves(value, path=()):
