@@ -20,8 +20,6 @@ from sampler.optimise.problem import SiteProblem
 
 CHUNK_NUMBERS = 8_000_000
 """Numbers held at once while rows or prices are computed over all candidates: 64 MB."""
-PARALLEL = 1.0 - 1e-9
-"""Two rows of one limit whose directions have a cosine above this say the same."""
 
 Sites = NDArray[np.int64] | None
 
@@ -96,30 +94,6 @@ class RowPool:
                        tuple(z[:, k] for z, k in zip(self.pieces, kept, strict=True)),
                        tuple(number[row[k]] for row, k in zip(self.row, kept, strict=True)),
                        tuple(lift[k] for lift, k in zip(self.lift, kept, strict=True)))
-
-    def join(self, other: RowPool) -> RowPool:
-        """These rows and then the other's, but for those nearly parallel to a row of the same limit that is here."""
-        both = RowPool(self.split, np.append(self.limit, other.limit),
-                       tuple(np.concatenate(pair, axis=1) for pair in zip(self.pieces, other.pieces, strict=True)),
-                       tuple(np.append(mine, len(self) + theirs)
-                             for mine, theirs in zip(self.row, other.row, strict=True)),
-                       tuple(np.append(mine, theirs) for mine, theirs in zip(self.lift, other.lift, strict=True)))
-        z, keep = both.in_feature_space(), np.ones(len(both), bool)
-        z /= np.linalg.norm(z, axis=1, keepdims=True)
-        for limit in np.unique(other.limit):
-            alike = np.flatnonzero(both.limit == limit)
-            close = np.abs(np.tril(z[alike] @ z[alike].T, -1)) > PARALLEL
-            keep[alike] = ~close.any(axis=1) | (alike < len(self))
-        return both.take(np.flatnonzero(keep))
-
-    def in_feature_space(self) -> Array:
-        """Each row as one vector over (block, lift, direction), (R, Σ_b multiplicity_b q_b); lengths are kept."""
-        wide = []
-        for block, z, row, lift in zip(self.split.blocks, self.pieces, self.row, self.lift, strict=True):
-            part = np.zeros((len(self), block.multiplicity, block.q))
-            part[row, lift] = z.T
-            wide.append(part.reshape(len(self), -1))
-        return np.concatenate(wide, axis=1)
 
     def in_own_terms(self, problem: SiteProblem) -> tuple[Array, NDArray[np.int64]]:
         """z (R, p) in the problem's own terms, with directions[l]ᵀz / τ_l = 1 exactly, and the problem's limits l, (R,)."""

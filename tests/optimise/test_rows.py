@@ -54,17 +54,6 @@ def test_prices_are_weighted_coefficients(rng):
     assert rows.take(np.array([2, 0])).coefficients(some) == pytest.approx(rows.coefficients()[[2, 0]][:, some])
 
 
-def test_joining_drops_rows_that_say_the_same(rng):
-    problem = random_problem(6)
-    weights = rng.uniform(0.2, 1, problem.n)
-    _, rows, _ = rows_at(problem, weights)
-    _, other, _ = rows_at(problem, rng.uniform(0.2, 1, problem.n))
-    assert len(rows.join(rows)) == len(rows)
-    both = rows.join(other)
-    assert len(both) == 2 * len(rows)
-    assert both.coefficients() == pytest.approx(np.concatenate([rows.coefficients(), other.coefficients()]), rel=1e-12)
-
-
 def test_coefficients_in_chunks_are_the_same(rng, monkeypatch):
     problem = random_problem(2)
     weights = rng.uniform(0.2, 1, problem.n)

@@ -9,7 +9,6 @@ from dataclasses import replace
 import numpy as np
 import pytest
 from random_problems import (
-    all_subsets,
     allowed,
     cheapest_by_enumeration,
     grid_problem,
