@@ -32,7 +32,8 @@ class AuditedLimit:
     """One limit: `predicted` and `maximum` are k·u in `unit`; `where_mm` is the worst place of a region limit.
 
     `predicted` is infinite when the sites do not determine the direction at all. `floor`: what it would be with every
-    candidate measured, NaN when not computed; no plan beats it.
+    candidate measured, NaN when not computed; no plan beats it. `after_loss`: what it is after the worst loss of as many
+    sites (or stops) as the rules say, NaN when they say none.
     """
 
     label: str
@@ -42,10 +43,16 @@ class AuditedLimit:
     where_mm: tuple[float, float] | None = None
     axis: str = ""
     floor: float = math.nan
+    after_loss: float = math.nan
 
     @property
     def ratio(self) -> float:
         return self.predicted / self.maximum
+
+    @property
+    def worst_ratio(self) -> float:
+        """The ratio after the losses that must be borne, if any: it decides whether the limit is met."""
+        return self.ratio if math.isnan(self.after_loss) else max(self.predicted, self.after_loss) / self.maximum
 
 
 @dataclass(frozen=True, slots=True)
@@ -76,7 +83,7 @@ class PositionMap:
 
 @dataclass(frozen=True, slots=True)
 class Audit:
-    """What a set of sites would achieve, computed from the sites alone."""
+    """What a set of sites would achieve, computed from the sites alone. `lost`: the losses that its limits must bear."""
 
     sites: Sites
     limits: tuple[AuditedLimit, ...]
@@ -85,14 +92,15 @@ class Audit:
     position: PositionMap
     worst_position: AuditedLimit
     """The worst predicted position over the panel less its edge exclusion; `maximum` is NaN."""
+    lost: int = 0
 
     @property
     def meets_limits(self) -> bool:
-        return all(limit.ratio <= MEETS for limit in self.limits)
+        return all(limit.worst_ratio <= MEETS for limit in self.limits)
 
     @property
     def worst(self) -> AuditedLimit:
-        return max(self.limits, key=lambda limit: limit.ratio)
+        return max(self.limits, key=lambda limit: limit.worst_ratio)
 
 
 @dataclass(frozen=True, slots=True)
