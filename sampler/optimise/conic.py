@@ -17,13 +17,13 @@ def log_det_bound_conic(problem: SiteProblem, budget: float, *, limited: bool = 
     n, m, p = problem.blocks.shape
     w = cp.Variable(n)
     flat = problem.blocks.reshape(n * m, p)
-    matrix = problem.prior_precision + flat.T @ cp.diag(cp.kron(w, np.ones(m))) @ flat
+    matrix = problem.prior_precision + flat.T @ cp.diag(np.repeat(np.eye(n), m, axis=0) @ w) @ flat
     demands = [w >= problem.required.astype(float), w <= np.where(problem.forbidden & ~problem.required, 0.0, 1.0),
                problem.cost @ w <= budget]
     if problem.max_sites is not None:
         demands.append(cp.sum(w) <= problem.max_sites)
     for members, low, high in zip(problem.rules.members, problem.rules.lower, problem.rules.upper, strict=True):
-        demands += [cp.sum(w[members]) >= low, cp.sum(w[members]) <= high]
+        demands += [cp.sum(w[members]) >= np.ceil(low), cp.sum(w[members]) <= np.floor(high)]
     if limited:
         demands += [cp.matrix_frac(direction / tau, matrix) <= 1.0
                     for direction, tau in zip(problem.directions, problem.tau, strict=True)]

@@ -16,7 +16,7 @@ import numpy as np
 from sampler.optimise.blocks import Array, Split
 from sampler.optimise.lost import ratios_after_loss
 from sampler.optimise.lost_variances import LostVariances
-from sampler.optimise.pool import Choice, Indices, Mask, Pool, cost_step, first_best, pool
+from sampler.optimise.pool import TIE, Choice, Indices, Mask, Pool, cost_step, first_best, pool
 from sampler.optimise.problem import SiteProblem
 from sampler.optimise.variances import Variances, inverted, powers
 
@@ -38,6 +38,8 @@ REDUCED_COST_CUTS = (0.1, 0.3, np.inf)
 POOL_SIZE = 2000
 PATIENCE = 20
 """Kicks without gain before a new start."""
+RETURNS = 6
+"""A cost is given up when this many starts ended at the same least worst ratio above 1."""
 STARTS = 30
 """Starts without success before `fewest` gives up on a cost; the deadline may end it earlier."""
 
@@ -84,7 +86,8 @@ class Exchange:
 
     def ridge(self, share: float) -> float:
         """A share of the information that a set of average sites of this budget would give in the orthonormal basis."""
-        return share * self.budget / max(self.pool.cost.mean(), 1e-300) / max(self.split.blocks[0].n, 1)
+        sites = max(1.0, self.budget / self.pool.cost.mean()) if self.pool.n else 1.0
+        return share * sites / max(self.split.blocks[0].n, 1)
 
     def _scored(self) -> Variances:
         return (LostVariances if self.pool.lost else Variances)(self.split, self.pool, self.watch)
@@ -109,7 +112,7 @@ class Exchange:
         while True:
             allowed = np.flatnonzero(choice.addable(self.budget))
             if not len(allowed):
-                return None if choice.missing or np.any(choice.counts > self.pool.upper) or not len(choice) else choice
+                return None if choice.missing or np.any(choice.counts > self.pool.upper) else choice
             choice.add(int(self.rng.choice(allowed)) if uniform else self._draw(allowed))
 
     def _draw(self, sites: Indices) -> int:
@@ -190,11 +193,12 @@ class Exchange:
             self.fill(choice, exponent, self.ridge(LAST_RIDGE))
         return choice, float(self.ratios(choice).max(initial=0.0))
 
-    def attempt(self, patience: int) -> Choice | None:
-        """One start: descents, then kicks from the best set so far until none helps; None if no limit-meeting set came."""
+    def attempt(self, patience: int) -> tuple[Choice | None, float]:
+        """One start: descents, then kicks from the best set so far until none helps. The set and its worst ratio, or None
+        if the rules admitted none."""
         best = self.start()
         if best is None:
-            return None
+            return None, np.inf
         with np.errstate(over="ignore", invalid="ignore"):
             self.limits = Variances(self.split, self.pool, self.watch)  # losses, if any, are looked at when it is nearly done
             for share in RIDGES:
@@ -207,7 +211,7 @@ class Exchange:
                 misses = 0 if worst < least * (1.0 - SMALL_CHANGE) else misses + 1
                 if worst <= least:
                     best, least = other, worst
-        return best if least <= FEASIBLE else None
+        return best, least
 
 
 def exchanges(split: Split, problem: SiteProblem, budget: float, *, weights: Array | None, reduced_costs: Array | None,
@@ -241,6 +245,7 @@ def find(split: Split, problem: SiteProblem, count: float, *, weights: Array | N
     `weights`, `reduced_costs` (n,) of the relaxation guide it. `deadline` is a time of `time.monotonic`.
     """
     clock = Clock(deadline, stop)
+    least, returns = np.inf, 0
     if len(split.impossible):
         return None
     for round_ in range(starts):
@@ -248,9 +253,14 @@ def find(split: Split, problem: SiteProblem, count: float, *, weights: Array | N
             return None
         search = exchanges(split, problem, count, weights=weights, reduced_costs=reduced_costs, rng=rng, clock=clock,
                            round_=round_)
-        choice = search.attempt(patience)
-        if choice is not None:
+        choice, worst = search.attempt(patience)
+        if choice is not None and worst <= FEASIBLE:
             return np.sort(search.pool.index[choice.sites])
+        if worst < least * (1.0 - TIE):
+            least, returns = worst, 0
+        returns += worst <= least * (1.0 + TIE)
+        if returns >= RETURNS:
+            return None
     return None
 
 
@@ -258,7 +268,7 @@ def prune(split: Split, problem: SiteProblem, chosen: Indices) -> Indices:
     """Drops sites, dearest first and then by how little they are missed, while every limit and rule is still met."""
     source = pool(split, problem, chosen)
     choice = Choice(source, source.places(chosen))
-    while len(choice) > 1:
+    while len(choice):
         options = np.flatnonzero(choice.droppable())
         worst = np.array([ratios_after_loss(split, source.index[np.delete(choice.sites, i)], source.lost).max(initial=0.0)
                           for i in options])

@@ -35,7 +35,7 @@ FIRST_GAP, TIGHTENING = 1e-2, 10.0
 """The path is followed until its gap is below this: at first loosely, on candidates that others will replace."""
 EVEN = 0.2
 IDLE = 0.05
-PENALTY = 100.0
+PENALTY, MOST_PENALTY = 100.0, 1e7
 """First price of missing the limits by 1, per direction; grows tenfold while some excess is left."""
 EXCESS = 1e-6
 RIDGE = 1e-6
@@ -81,7 +81,7 @@ class _Bounder:
         self.limits = np.arange(split.limits if limited else 0)
         self.watch = self.limits
         self.members, self.level, self.sign = [], [], []
-        rules = [*zip(problem.rules.members, problem.rules.lower, problem.rules.upper, strict=True)]
+        rules = [*zip(problem.rules.members, np.ceil(problem.rules.lower), np.floor(problem.rules.upper), strict=True)]
         if problem.max_sites is not None and problem.max_sites < problem.n:
             rules.append((np.arange(problem.n), 0.0, float(problem.max_sites)))
         for members, low, high in rules:
@@ -107,23 +107,31 @@ class _Bounder:
         columns = np.flatnonzero((weights > 0) & free)
         tolerance = FIRST_GAP
         for _ in range(ROUNDS):
-            if self.over():
+            if self.over() or not len(columns):
                 break
             program = self._program(columns)
+            if program.budget <= 0.0:
+                break
+            known = np.isin(np.arange(self.problem.n), columns) | self.problem.required
             peak = climb_path(program, self._inner(weights[columns], program), tolerance, penalty, self.over)
             weights = self.problem.required.astype(float)
             weights[columns] = peak.weights
-            gains = self._bound(weights, peak.limit_duals, peak.rule_duals)
-            paying = np.setdiff1d(np.flatnonzero((gains > tolerance / self.budget) & free), columns)
+            price = self._bound(weights, peak.limit_duals, peak.rule_duals)
+            # What pays is judged by what the budget is worth to all sites and, when nothing does, to the columns alone.
+            for priced in (price, np.where(known, price, 0.0)):
+                gains = price - self._knapsack(priced)[2] * self.problem.cost
+                paying = np.setdiff1d(np.flatnonzero((gains > tolerance / self.budget) & free), columns)
+                if len(paying):
+                    break
             ratio = self._ratios(weights)
             missed = np.setdiff1d(np.flatnonzero(ratio > 1.0 + EXCESS), self.watch)
             lax = peak.excess > EXCESS * 100
-            if not len(paying) and not len(missed) and not lax and tolerance <= GAP:
+            if not len(paying) and not len(missed) and (not lax or penalty >= MOST_PENALTY) and tolerance <= GAP:
                 break
             if tolerance == FIRST_GAP:  # only once, so that columns cannot come and go for ever
                 columns = columns[(gains[columns] > -IDLE) | (peak.weights > IDLE)]
             tolerance = max(GAP, tolerance / TIGHTENING)
-            if lax:
+            if lax and not len(paying) and penalty < MOST_PENALTY:
                 penalty *= 10.0
             order = np.lexsort((self.problem.key[paying], -gains[paying]))
             columns = np.union1d(columns, paying[order[:MORE_COLUMNS]])
@@ -177,7 +185,7 @@ class _Bounder:
         return weights, float(price @ weights), rate
 
     def _bound(self, weights: Array, limit_duals: Array, rule_duals: Array) -> Array:
-        """The bound at these weights and multipliers, over all candidates; keeps it if it is better. The gains (n,)."""
+        """The bound at these weights and multipliers, over all candidates; keeps it if it is better. The prices (n,)."""
         problem = self.problem
         matrices = self._matrices(weights)
         price, total = np.zeros(problem.n), 0.0
@@ -195,10 +203,10 @@ class _Bounder:
             price[members] -= sign * dual
             total += dual * level
         _, most, rate = self._knapsack(price)
-        gains = price - rate * problem.cost
         if total + most + offset(self.split, problem) < self.best.value:
-            self.best = LogDetBound(total + most + offset(self.split, problem), weights, gains)
-        return gains
+            self.best = LogDetBound(total + most + offset(self.split, problem), weights,
+                                    price - rate * problem.cost)
+        return price
 
     def _program(self, columns: Indices) -> Concave:
         problem = self.problem

@@ -139,6 +139,8 @@ def climb_path(program: Concave, weights: Array, tolerance: float, penalty: floa
 
     g = constraints(weights, s, at)
     y = 1.0 / -g
+    if elastic:  # so that the multipliers of the elastic demands add up to their price from the first
+        y *= max(1.0, penalty / y[2 * n + 1:].sum())
     gap = float(-g @ y)
     for _ in range(STEPS):
         dual_residual = slope(at) + transposed(y, at)

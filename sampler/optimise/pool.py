@@ -72,7 +72,7 @@ def pool(split: Split, problem: SiteProblem, keep: Indices | None = None) -> Poo
     columns = np.concatenate(inside) if inside else np.zeros(0, np.int64)
     members = csr_array((np.ones(len(columns)), columns, bounds), shape=(len(inside), len(index)))
     return Pool(index, tuple(np.ascontiguousarray(block.rows[index]) for block in split.blocks), problem.cost[index],
-                problem.required[index], members, np.asarray(rules.lower, float), np.asarray(rules.upper, float),
+                problem.required[index], members, np.ceil(rules.lower), np.floor(rules.upper),
                 len(index) if problem.max_sites is None else min(problem.max_sites, len(index)),
                 conflicts(problem.xy[index], problem.spacing) if problem.xy is not None and problem.spacing > 0 else None,
                 problem.lost)

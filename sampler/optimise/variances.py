@@ -100,7 +100,7 @@ class Variances:
                 used = active[owner]
                 columns, owner = columns[:, used], (np.cumsum(active) - 1)[owner[used]]
             n, m, q = rows.shape
-            readings = (rows.reshape(n * m, q) @ (inverse @ columns)).reshape(n, m, -1)
+            readings = (rows.reshape(n * m, q) @ (inverse @ columns)).reshape(n, m, columns.shape[1])
             if m == 1:
                 part = readings[:, 0]
                 part *= part
