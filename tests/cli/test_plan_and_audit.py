@@ -165,7 +165,7 @@ def test_a_wrong_column_of_sites(folder, monkeypatch, capsys):
 
 def test_ctrl_c_writes_the_best_so_far(folder):
     """SIGINT during a search that would take minutes: exit 0, files whole, and the summary says that it was interrupted."""
-    study = STUDY.replace('"affine"', '"order3"').replace("0.8", "1.25").replace("seconds = 20", "seconds = 300")
+    study = STUDY.replace('"affine"', '"order3"').replace("0.8", "0.85").replace("seconds = 20", "seconds = 300")
     rows = [f"A{i}-{j},{5 + 4.8 * i:.3f},{5 + 4.7 * j:.3f}" for i in range(61) for j in range(41)]
     (folder / "marks.csv").write_text("id,x_mm,y_mm\n" + "\n".join(rows) + "\n")
     (folder / "study.toml").write_text(study)
