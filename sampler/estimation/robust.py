@@ -22,6 +22,8 @@ FLAG_CHANCE = 0.01
 STEPS = 200
 SETTLED = 1e-10
 """Fitted values that move less than this share of the scale have settled."""
+SUSPECTS_SETTLED = 1e-3
+"""The same where the estimate only says whom to suspect: least squares without them decides."""
 CHUNK = 4_000_000
 """Largest number of elements of a temporary array."""
 
@@ -36,7 +38,7 @@ class MEstimate:
 
 
 def m_estimate(q: Array, y: Array, bisquare: bool = False, group: NDArray[np.int64] | None = None,
-               start: Array | None = None) -> MEstimate:
+               start: Array | None = None, settled: float = SETTLED) -> MEstimate:
     """Huber's, or the bisquare, M-estimate of each row of y (g, n) by iteratively reweighted least squares.
 
     The scale is 1.4826 times the median absolute residual, renewed at every step, apart for each `group` (n,) of
@@ -58,7 +60,7 @@ def m_estimate(q: Array, y: Array, bisquare: bool = False, group: NDArray[np.int
         new = weighted(q, y[active], weight[active] / np.where(per_reading > 0, per_reading, 1.0) ** 2)
         moved = np.abs((new - coefficients[active]) @ q.T)
         coefficients[active] = new
-        active = active[(moved > SETTLED * per_reading + 1e-15 * np.abs(y[active])).any(axis=1)]
+        active = active[(moved > settled * per_reading + 1e-15 * np.abs(y[active])).any(axis=1)]
         if not len(active):
             break
     return MEstimate(coefficients, scale, weight)
@@ -104,8 +106,8 @@ def outliers(q: Array, y: Array, group: NDArray[np.int64] | None = None) -> Outl
     if n - rank < 3:
         nothing = np.full(y.shape, np.nan)
         return Outliers(np.zeros(y.shape, bool), nothing, np.full((len(y), groups), np.nan))
-    first = m_estimate(q, y, False, group)
-    second = m_estimate(q, y, True, group, first.coefficients)
+    first = m_estimate(q, y, False, group, None, SUSPECTS_SETTLED)
+    second = m_estimate(q, y, True, group, first.coefficients, SUSPECTS_SETTLED)
     flagged = second.weight < _weights(np.array(3.5), np.array(1.0), True)  # suspects beyond 3.5 robust sigmas
     # More than half flagged is no set of outliers: then the robust fit has found a minority, and nothing is flagged.
     flagged[flagged.mean(axis=1) > 0.5] = False

@@ -202,6 +202,19 @@ def test_progress_is_told(rng):
     assert len(said) == 4
 
 
+def test_share_that_repeats_counts_no_reading_noise(rng):
+    """Local 0.4 µm, half of its variance common, read twice with 0.6 µm: the share is one half, not what noise makes of it."""
+    layout = core_layout(12)
+    found = []
+    for _ in range(10):
+        local = 0.4 * np.sqrt(0.5) * (rng.normal(size=(1, 144, 2)) + rng.normal(size=(10, 144, 2)))
+        y = local[:, None] + 0.6 * rng.normal(size=(10, 2, 144, 2))
+        readings = Readings.of(layout, np.repeat(np.arange(10), 288), y.reshape(-1, 2), id=np.tile(layout.marks.id, 20))
+        means = readings.averaged()
+        found.append(repeats_share(means, means.dxy_um[:, 0], 0, 0.36))
+    assert np.mean(found) == pytest.approx(0.5, abs=0.06)
+
+
 def test_share_without_common_marks_is_not_known(rng):
     readings = Readings.of(core_layout(5), ["a", "b"], rng.normal(size=(2, 2)), id=core_layout(5).marks.id[:2])
     means = readings.averaged()
