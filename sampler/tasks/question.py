@@ -20,7 +20,7 @@ from sampler.tasks.units import Units, Visits, units_of
 from sampler.uncertainty.assumed import NO_TERMS, Assumed, SharedErrors
 from sampler.uncertainty.field import local_field
 from sampler.uncertainty.information import Knowledge, information, whiten
-from sampler.uncertainty.limits import Limits, stack
+from sampler.uncertainty.limits import Limits, no_limits, stack
 from sampler.uncertainty.position import WorstPlace, position_u, raster, worst_place
 from sampler.uncertainty.separate import in_words, inseparable
 
@@ -129,6 +129,8 @@ def _shared(study: Study) -> SharedErrors:
 
 def limit_rows(study: Study, assumed: Assumed) -> Limits:
     """The study's limits as rows: one per limited term, two (dx, dy) per raster point of each region."""
+    if not study.limits:
+        return no_limits(assumed.size, study.coverage_factor)
     return stack([_term_rows(study, assumed, source, limit) if isinstance(limit, TermLimit)
                   else region_rows(study, assumed, source, thinned(raster(study.layout, limit.region, limit.polygon_mm,
                                                                           SEARCH_STEPS)))
@@ -192,14 +194,17 @@ def problem_of(asked: Question, limits: Limits | None = None, tighten: float = 1
     """The question as the optimiser sees it, in units.
 
     `limits` replaces the raster's rows when more have been added; `tighten` < 1 asks for more than the limits. A mark that
-    reads with probability q counts with its expected information, √q times its rows.
+    reads with probability q counts with its expected information, √q times its rows. A spacing is in the panel's plane,
+    whatever the sides.
     """
     limits = asked.limits if limits is None else limits
     rules, rate = asked.study.rules, asked.candidates.sites.read_rate
+    spacing = rules.min_spacing_mm or 0.0
     whitened = asked.whitened if np.all(rate == 1.0) else asked.whitened * np.sqrt(rate)[:, None, None]
     return site_problem(asked.units.rows(whitened), limits.directions, limits.tau * tighten,
                         prior_precision=asked.assumed.prior_precision, required=asked.rules.required, key=asked.units.key,
-                        interest=asked.assumed.interest, rules=asked.rules.counts, max_sites=rules.max_sites)
+                        interest=asked.assumed.interest, rules=asked.rules.counts, max_sites=rules.max_sites,
+                        lost=rules.lost, xy=asked.units.xy_mm if spacing else None, spacing=spacing)
 
 
 def worst_of(asked: Question, knowledge: Knowledge, source: int) -> WorstPlace:

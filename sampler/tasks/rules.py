@@ -57,6 +57,9 @@ def unit_rules(study: Study, units: Units) -> UnitRules:
         members = np.flatnonzero(inside_zone(study.layout, zone, sites.xy_mm))
         rows.append((f'per_zone "{zone.name}"', units.containing(members), float(zone.least),
                      np.inf if zone.most is None else float(zone.most)))
+    if study.search.sites is not None:
+        rows.append((f"[search] sites = {study.search.sites}", np.arange(n), float(study.search.sites),
+                     float(study.search.sites)))
     counts = CountRules(tuple(row[1] for row in rows), np.array([row[2] for row in rows]),
                         np.array([row[3] for row in rows]), tuple(row[0] for row in rows))
     return UnitRules(required, counts)
@@ -95,6 +98,8 @@ def check_rules(study: Study, units: Units, found: UnitRules) -> None:
 
 
 def _said(label: str, lower: float, upper: float) -> str:
+    if lower == upper:
+        return f"{label}: exactly {lower:g}"
     if np.isinf(upper):
         return f"{label}: at least {lower:g}"
     return f"{label}: at most {upper:g}" if lower <= 0 else f"{label}: {lower:g} to {upper:g}"

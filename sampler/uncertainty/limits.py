@@ -42,3 +42,10 @@ def stack(parts: list[Limits]) -> Limits:
         tuple(unit for part in parts for unit in part.unit), tuple(label for part in parts for label in part.label),
         np.concatenate([part.source for part in parts]), np.concatenate([part.where_mm for part in parts]),
         np.concatenate([part.axis for part in parts]), parts[0].coverage_factor)
+
+
+def no_limits(p: int, coverage_factor: float) -> Limits:
+    """No demand at all on p terms."""
+    nothing = np.zeros(0)
+    return Limits(np.zeros((0, p)), nothing, (), (), nothing.astype(np.int64), np.zeros((0, 2)), nothing.astype(np.int64),
+                  coverage_factor)
