@@ -36,7 +36,7 @@ def plan_json(plan: Plan) -> str:
     candidates together would reach. Numbers that do not exist are null, with a `reason` where one is needed."""
     cannot = plan.status == "cannot"
     sites = plan.sites.take(np.zeros(0, np.int64)) if cannot else plan.sites
-    return _json({
+    return json_text({
         **_provenance(plan.study), **_certificate(plan.certificate), "candidates": len(plan.candidates.sites),
         "n_sites": len(sites),
         "lower_bound": _finite(plan.lower_bound), "fewest_proven": plan.fewest_proven, "status": plan.status,
@@ -53,7 +53,7 @@ def audit_json(result: SiteAudit) -> str:
     """The audit of a given site list as JSON, format 1; `fewest` is what a plan would need."""
     fewest = result.fewest
     add = result.best_to_add
-    return _json({
+    return json_text({
         **_provenance(result.study), "candidates": len(result.candidates.sites), "n_sites": len(result.audit.sites),
         "meets_limits": result.audit.meets_limits, "log_det": _finite(result.audit.log_det),
         "d_efficiency": _finite(result.d_efficiency), "droppable": list(result.droppable),
@@ -123,7 +123,7 @@ def _known(name: str, value: float) -> dict[str, Any]:
     return {name: _finite(value)} | ({} if math.isfinite(value) else {"reason": NOT_DETERMINED})
 
 
-def _json(values: dict[str, Any]) -> str:
+def json_text(values: dict[str, Any]) -> str:
     """JSON with one line for each key and for each item of a list of objects."""
     lines = []
     for key, value in values.items():

@@ -13,7 +13,7 @@ import sampler
 from sampler.cli.main import COMMANDS, group
 
 ROOT = Path(__file__).parents[2]
-WITHOUT_OUT = {"certify"}
+WITHOUT_OUT = {"certify", "completion"}
 """Commands that only read and print."""
 
 
@@ -57,3 +57,18 @@ def test_heavy_packages_are_not_loaded_for_help():
             "print(sorted({'numpy', 'scipy', 'cvxpy', 'highspy', 'matplotlib', 'shapely', 'pyarrow', 'jinja2'} & set(sys.modules)))")
     shown = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, check=True)
     assert shown.stdout.strip().endswith("[]")
+
+
+@pytest.mark.parametrize("shell", ["bash", "zsh", "fish"])
+def test_completion_names_the_program(shell):
+    shown = run("completion", shell)
+    assert shown.exit_code == 0
+    assert "_SAMPLER_COMPLETE" in shown.output
+    assert "sampler" in run("completion", shell, "--json").output
+
+
+def test_completion_completes_commands():
+    from click.shell_completion import ShellComplete
+
+    found = ShellComplete(group, {}, "sampler", "_SAMPLER_COMPLETE").get_completions([], "pl")
+    assert [item.value for item in found] == ["plan"]
