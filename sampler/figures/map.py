@@ -21,6 +21,7 @@ from sampler.figures.contours import Raster, draw_colour_bar, draw_contours, wor
 from sampler.figures.labels import place_labels
 from sampler.panel.candidates import Candidates
 from sampler.panel.layout import Layout
+from sampler.panel.thinning import thinned
 from sampler.tasks.results import Audit, Plan, SiteAudit
 from sampler.tasks.study import Study
 from sampler.tasks.wording import plain, share, significant
@@ -223,7 +224,7 @@ def _draw_marks(axes: Axes, scene: _Scene, origin: Array) -> list[Artist]:
             (free, MOST_DOTS, "candidate", "candidates", dots)):
         if len(xy) == 0:
             continue
-        drawn = style.thinned(xy, most)
+        drawn = thinned(xy, most)
         axes.plot(*xy[drawn].T, linestyle="none", zorder=4.0, scalex=False, scaley=False, **look)
         label = f"{len(xy):,} {one if len(xy) == 1 else many}"
         if len(drawn) < len(xy):
@@ -247,7 +248,7 @@ def _draw_sites(axes: Axes, scene: _Scene, origin: Array, points_per_mm: float) 
         size = float(np.clip(5.6 * np.sqrt(MOST_NUMBERS / max(n, MOST_NUMBERS)), 2.6, 5.6))
         look = {"linestyle": "none", "markersize": size, "markerfacecolor": style.INK,
                 "markeredgecolor": style.PAPER, "markeredgewidth": 0.7}
-        drawn = style.thinned(xy, MOST_DOTS)
+        drawn = thinned(xy, MOST_DOTS)
         required = np.isin(sites.id[drawn], np.asarray(scene.study.rules.required, dtype=str))
         note = f", numbered {scene.order}" if n <= MOST_NUMBERS else ""
         for rows, marker, label in ((drawn[~required], "o", f"{_count(n, 'site')}{note}"),
