@@ -11,6 +11,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from sampler.panel.layout import Layout
+from sampler.panel.thinning import thinned
 from sampler.report.summary import bound_text, counted
 from sampler.tasks.results import Audit, PositionMap
 from sampler.tasks.review import Choice, Page
@@ -22,7 +23,7 @@ MOST_CANDIDATES = 3000
 MOST_OTHER_MARKS = 800
 OTHER_STEPS = 41
 """Raster steps along the longer side for the choices of a trade-off; the plan itself keeps its audit's raster."""
-MOST_LEVELS = 9
+MOST_LEVELS = 8
 REACH_TO_LIMIT = 1.5
 """A limit this much above the largest value still stretches the scale up to itself."""
 FLAT = 1e-3
@@ -30,6 +31,7 @@ MOST_CODE, NOTHING, NOT_DETERMINED = 60_000, 65_534, 65_535
 SCALE_REACH = 8.0
 """Values up to so many times the highest level keep their number; the page says "more than" beyond."""
 NAME = 120
+TICK_ROOM = 14
 
 # From pale sand to slate blue in equal steps of lightness, so that it darkens as steadily in grey; light enough for ink.
 COLOURS = ("#fcf6e0", "#e4e8c6", "#c6dbb3", "#a2cea8", "#7ec1a4", "#5ab2a5", "#3ea2a6", "#308ea5", "#317b9f", "#376796")
@@ -49,27 +51,17 @@ def coordinate(value: float) -> str:
     return f"{round(value, 3) + 0.0:.3f}".rstrip("0").rstrip(".")
 
 
-def thinned(xy: Array, most: int) -> NDArray[np.int64]:
-    """Rows of at most `most` points spread like all of them: of each box of a lattice the first; all when no more."""
-    if len(xy) <= most:
-        return np.arange(len(xy))
-    side = int(math.sqrt(most))
-    place = (xy - xy.min(axis=0)) / np.maximum(np.ptp(xy, axis=0), 1e-9)
-    box = np.minimum((place * side).astype(np.int64), side - 1) @ [side, 1]
-    return np.sort(np.unique(box, return_index=True)[1])
-
-
 def levels(low: float, high: float) -> list[float]:
-    """At most nine round numbers from below `low` to above `high`.
+    """At most eight round numbers between `low` and `high`, at least one.
 
     >>> levels(0.41, 0.78)
-    [0.4, 0.45, 0.5, 0.55, 0.6, 0.65, 0.7, 0.75, 0.8]
+    [0.45, 0.5, 0.55, 0.6, 0.65, 0.7, 0.75]
     """
     if high - low <= FLAT * high:
         low, high = 0.9 * low, 1.1 * high
     tens = 10.0 ** math.floor(math.log10((high - low) / MOST_LEVELS))
     for step in (tens * nice for nice in (1, 2, 2.5, 5, 10, 20)):
-        first, last = math.floor(low / step + 1e-9), math.ceil(high / step - 1e-9)
+        first, last = math.floor(low / step + 1e-9) + 1, math.ceil(high / step - 1e-9) - 1
         if last - first < MOST_LEVELS:
             break
     return [float(f"{k * step:.6g}") for k in range(first, last + 1)]
@@ -93,7 +85,7 @@ def page_data(page: Page) -> dict[str, Any]:
     rows = np.union1d(shown, np.flatnonzero(used))
     row_of = {str(name): k for k, name in enumerate(sites.id[rows])}
     others = own_frame(layout, layout.marks.xy_mm[plan.candidates.reason != ""])
-    scales = _scales(plan.audit.position, page.chosen, sorted({limit.maximum for limit in plan.audit.limits
+    scales = _scales(plan.audit.position, page.limit_ratio, sorted({limit.maximum for limit in plan.audit.limits
                                                              if limit.where_mm is not None}))
     return {
         "marks": {"id": [plain(str(name), NAME) for name in sites.id[rows]], **_columns(own_frame(layout, sites.xy_mm[rows])),
@@ -112,18 +104,18 @@ def _columns(xy: Array) -> dict[str, list[float]]:
     return {"x": np.round(xy[:, 0], 3).tolist(), "y": np.round(xy[:, 1], 3).tolist()}
 
 
-def _scales(position: PositionMap, chosen: Choice | None, limits: list[float]) -> dict[str, Any]:
+def _scales(position: PositionMap, limit_ratio: Array, limits: list[float]) -> dict[str, Any]:
     """Levels, their colours and the limits to draw: `um` for k·u, `ratio` for its share of the limit, null without one."""
     known = position.k_u_um[np.isfinite(position.k_u_um)]
     scales: dict[str, Any] = {"um": None, "ratio": None}
     if known.size:
         high = float(known.max())
-        scales["um"] = _scale(levels(float(known.min()), max([high, *(x for x in limits if x <= REACH_TO_LIMIT * high)])),
+        # A hair beyond a limit, so that the limit itself may be a level.
+        scales["um"] = _scale(levels(float(known.min()), max([high, *(1.001 * x for x in limits if x <= REACH_TO_LIMIT * high)])),
                               limits)
-    if chosen is not None:
-        ratio = chosen.limit_ratio[np.isfinite(chosen.limit_ratio)]
-        if ratio.size:
-            scales["ratio"] = _scale(levels(min(float(ratio.min()), 0.9), max(float(ratio.max()), 1.0)), [1.0])
+    ratio = limit_ratio[np.isfinite(limit_ratio)]
+    if ratio.size:
+        scales["ratio"] = _scale(levels(min(float(ratio.min()), 0.9), max(float(ratio.max()), 1.001)), [1.0])
     return scales
 
 
@@ -160,7 +152,7 @@ def states(page: Page, row_of: dict[str, int], scales: dict[str, Any]) -> list[d
     if page.chosen is None:
         return [{"plan": True, "name": "every candidate measured", "rows": [], "path": None, "loss": [],
                  **_said(page.plan.audit, layout), "answer": {"worst": _worst(page.plan.audit, layout)},
-                 "raster": _raster(layout, page.plan.audit, None, scales, None)}]
+                 "raster": _raster(layout, page.plan.audit, page.limit_ratio, scales, None)}]
     mine = set(page.chosen.audit.sites.id.tolist())
     found = [(choice, False) for choice in page.others if set(choice.audit.sites.id.tolist()) != mine]
     same = [choice.ratio_at_least for choice in page.others if set(choice.audit.sites.id.tolist()) == mine]
@@ -226,21 +218,22 @@ def _answer(page: Page, choice: Choice, is_plan: bool, name: str, at_least: floa
         bound = f"lower bound {bound_text(plan.lower_bound)}" if math.isfinite(plan.lower_bound) else "no lower bound"
         proof = [name, f"{proof_words(page)}; {bound}"]
     elif math.isfinite(at_least):
-        proof = [name, f"another choice; no {name} reach less than {share(at_least)}"]
+        proof = [name, f"another choice; no set of {name} gets below {share(at_least)}"]
     else:
         proof = [name, "another choice; what as many could reach is not known"]
     tightest = ["no limits", "the study sets none"]
     if audit.limits:
         worst = audit.worst
-        told = f"{counted(missed, 'limit')} missed, most: " if missed else "every limit met, tightest: "
+        told = f"{counted(missed, 'limit')} missed{', most' if missed > 1 else ''}: " if missed else "every limit met, tightest: "
         size, maximum = against(worst.predicted, worst.maximum)
         tightest = [share(worst.ratio) if math.isfinite(worst.ratio) else "not determined",
                     f"{told}{plain(worst.label, 60)}, {size} of {maximum} {worst.unit}"]
     spent = [f"{route.read_s:.1f} reading", f"{route.travel_s:.1f} moving", f"{route.handling_s:.1f} handling"]
     if route.flip_s:
         spent.append(f"{route.flip_s:.1f} turning over")
-    return {"proof": proof, "tightest": tightest, "seconds": [f"{route.seconds:.1f} s", ", ".join(spent)],
+    said = {"proof": proof, "tightest": tightest, "seconds": [f"{route.seconds:.1f} s", ", ".join(spent)],
             "worst": _worst(audit, plan.study.layout)}
+    return {key: [text.replace(" %", "\u00a0%") for text in texts] for key, texts in said.items()}
 
 
 def proof_words(page: Page) -> str:
@@ -261,7 +254,7 @@ def loss_texts(choice: Choice) -> list[str]:
 
 def _loss(ratio: float, label: str) -> str:
     if math.isinf(ratio):
-        return f"{label} no longer determined"
+        return f"{label} not determined"
     return f"still met, {label} at {share(ratio)}" if ratio <= 1 else f"MISSED, {label} at {share(ratio)}"
 
 
@@ -289,7 +282,10 @@ def chart(found: Sequence[dict[str, Any]], size: tuple[int, int], margin: tuple[
     for state in found:
         state["chart"] = [x(state["count"]), y(state["ratio"])] if state["ratio"] is not None else None
     bound = sorted({(x(state["count"]), y(state["at_least"])) for state in found if state["at_least"]})
-    ticks = [t for t in (0.05, 0.1, 0.2, 0.5, 0.8, 1, 1.2, 1.5, 2, 3, 5, 10, 20, 50, 100, 1000) if low <= t <= high]
+    ticks = [1.0]
+    for tick in (0.8, 1.2, 0.5, 1.5, 2, 0.2, 3, 5, 10, 0.1, 20, 50, 100, 1000):
+        if low <= tick <= high and min(abs(y(tick) - y(other)) for other in ticks) >= TICK_ROOM:
+            ticks.append(tick)
     step = next(step for step in (1, 2, 5, 10, 20, 50, 100, 200, 500, 1000, 10**6) if (max(counts) - min(counts)) / step <= 6)
     return {"found": [state["chart"] for state in known], "bound": bound, "one": y(1.0), "floor": size[1] - bottom,
             "y": [(y(t), share(t)) for t in ticks],

@@ -27,7 +27,7 @@ Indices = NDArray[np.int64]
 LAST_READING = 1e-9
 """Share of a reading's variance that all the others leave it, below which the reading is the only one of its kind."""
 CHUNK_NUMBERS = 4_000_000
-ROUTE_ITERATIONS = 200
+ROUTE_ITERATIONS = 50
 """Improvements tried on the order of each choice of a trade-off; some hundredths of a second each."""
 
 
@@ -85,12 +85,12 @@ class Claims:
     `stop`, `stop_xy_mm` as in `Plan`.
     """
 
-    study: Source
-    layout: Source
     status: str
     lower_bound: float
     d_efficiency_at_least: float
     seconds: float
+    study: Source
+    layout: Source
     advice: tuple[str, ...] = ()
     warnings: tuple[str, ...] = ()
     interrupted: bool = False
@@ -103,11 +103,13 @@ class Claims:
 class Page:
     """What the report page shows. `chosen` is None when the limits cannot be met: then nothing was chosen.
 
-    `others`: the choices of a trade-off by rising count. `command` repeats the plan; `version` made it.
+    `limit_ratio` is of the plan's audit, as in `Choice`. `others`: the choices of a trade-off by
+    rising count. `command` repeats the plan; `version` made it.
     """
 
     plan: Plan
     chosen: Choice | None
+    limit_ratio: Array
     others: tuple[Choice, ...]
     verdict: Verdict | None
     command: str
@@ -126,6 +128,9 @@ def review(plan: Plan, *, points: Sequence[TradeOffPoint] = (), verdict: Verdict
     if plan.status != "cannot":
         rows = _rows(rows_of, [str(name) for name in plan.sites.id], "the plan")
         chosen = _choice(asked, _visits(rows, plan.stop), plan.audit, plan.stop_xy_mm, plan.route)
+        limit_ratio = chosen.limit_ratio
+    else:
+        limit_ratio = _limit_ratio(asked, knowledge_of(asked, everything(asked)), plan.audit.position)
     best_possible = plan.audit if plan.status == "cannot" else achieved(asked, everything(asked)) if points else None
     others = []
     for point in points:
@@ -138,7 +143,7 @@ def review(plan: Plan, *, points: Sequence[TradeOffPoint] = (), verdict: Verdict
         assert best_possible is not None
         others.append(_choice(asked, visits, with_floors(achieved(asked, visits), best_possible), None, route,
                               point.ratio_at_least))
-    return Page(plan, chosen, tuple(sorted(others, key=lambda choice: choice.count)), verdict, command, version)
+    return Page(plan, chosen, limit_ratio, tuple(sorted(others, key=lambda choice: choice.count)), verdict, command, version)
 
 
 def recalled(study: Study, ids: Sequence[str], claims: Claims, asked: Question | None = None) -> Plan:
