@@ -10,11 +10,14 @@ import numpy as np
 from numpy.typing import NDArray
 
 from sampler.errors import InputError
+from sampler.tasks.chance import miss_chance
+from sampler.tasks.loss import with_losses
 from sampler.tasks.plan import plan, with_floors
 from sampler.tasks.question import Question, achieved, everything, knowledge_of, limits_achieved, question
 from sampler.tasks.results import MEETS, SiteAudit
 from sampler.tasks.study import Study
-from sampler.tasks.units import Visits
+from sampler.tasks.units import one_by_one
+from sampler.tasks.visiting import best_route, held, listed_route
 from sampler.uncertainty.information import information
 
 START_RIDGE = 1e-6
@@ -33,7 +36,8 @@ def audit(study: Study, ids: Sequence[str], *, search_fewest: bool = True,
     """
     asked = question(study)
     rows = _rows(asked, ids)
-    found = with_floors(achieved(asked, _visits(asked, rows)), achieved(asked, everything(asked)))
+    visits = one_by_one(rows)
+    found = with_floors(with_losses(achieved(asked, visits), asked, visits), achieved(asked, everything(asked)))
     fewest = plan(study, progress=progress, stop=stop, asked=asked) if search_fewest else None
     met = found.meets_limits
     droppable = tuple(str(asked.candidates.sites.id[row]) for row in rows if met and _meets_without(asked, rows, row))
@@ -43,12 +47,7 @@ def audit(study: Study, ids: Sequence[str], *, search_fewest: bool = True,
         per_site = (found.log_det - fewest.audit.log_det) / len(study.model) - math.log(len(rows) / len(fewest.sites))
         efficiency = math.exp(per_site)
     return SiteAudit(study, asked.candidates, found, droppable, None if met else _best_to_add(asked, rows), fewest,
-                     efficiency, study.warnings)
-
-
-def _visits(asked: Question, rows: NDArray[np.int64]) -> Visits:
-    """The listed marks read one by one, in the order given; no error of a stop is shared then."""
-    return Visits(rows, np.arange(len(rows)), rows)
+                     efficiency, study.warnings, listed_route(asked, rows), best_route(asked, rows), miss_chance(asked, visits))
 
 
 def _rows(asked: Question, ids: Sequence[str]) -> NDArray[np.int64]:
@@ -73,10 +72,9 @@ def _rows(asked: Question, ids: Sequence[str]) -> NDArray[np.int64]:
 
 def _meets_without(asked: Question, rows: NDArray[np.int64], row: int) -> bool:
     """Whether the limits hold without one site: the rows first, the regions' worst places only when these hold."""
-    knowledge = knowledge_of(asked, _visits(asked, rows[rows != row]))
-    if np.any(knowledge.variance(asked.limits.directions) > asked.limits.tau**2 * MEETS**2):
-        return False
-    return all(limit.ratio <= MEETS for limit in limits_achieved(asked, knowledge))
+    visits = one_by_one(rows[rows != row])
+    variance = knowledge_of(asked, visits).variance(asked.limits.directions)
+    return not np.any(variance > asked.limits.tau**2 * MEETS**2) and held(asked, visits)
 
 
 def _best_to_add(asked: Question, rows: NDArray[np.int64]) -> tuple[str, float] | None:
@@ -102,7 +100,7 @@ def _best_to_add(asked: Question, rows: NDArray[np.int64]) -> tuple[str, float] 
         response = blocks @ g
         worst[start:start + step] = (variance - np.einsum("ial,iab,ibl->il", response, gain, response)).max(axis=1)
     order = np.argsort(worst, kind="stable")[:5]
-    ratio = [max(limit.ratio for limit in limits_achieved(asked, knowledge_of(asked, _visits(asked, np.append(rows, free[i])))))
+    ratio = [max(limit.ratio for limit in limits_achieved(asked, knowledge_of(asked, one_by_one(np.append(rows, free[i])))))
              for i in order]
     best = int(np.argmin(ratio))
     return str(asked.candidates.sites.id[free[order[best]]]), float(ratio[best])

@@ -19,7 +19,7 @@ from sampler.model.basis import places
 from sampler.tasks.question import Question, knowledge_of, worst_of
 from sampler.tasks.results import Audit
 from sampler.tasks.study import TermLimit
-from sampler.tasks.units import Visits
+from sampler.tasks.units import Visits, one_by_one
 from sampler.uncertainty.information import RANK_TOLERANCE, Knowledge, information
 from sampler.uncertainty.position import WorstPlace
 
@@ -171,7 +171,7 @@ def worst_losses(asked: Question, visits: Visits, lost: int) -> tuple[WorstLoss,
 
 def _ratios(asked: Question, visits: Visits, sets: Indices) -> Array:
     """Squared ratios of each audited limit after the loss of each set of units, (sets, limits)."""
-    if asked.units.stops is None:
+    if _singly(asked, visits):
         return Losses(asked, visits).worst(sets)
     asks = demands(asked)
     worst = np.full((len(sets), int(asks.owner.max(initial=-1)) + 1), -np.inf)
@@ -184,10 +184,14 @@ def _ratios(asked: Question, visits: Visits, sets: Indices) -> Array:
 
 def without(asked: Question, visits: Visits, units: Indices) -> Visits:
     """The visits that are left when these of their units are lost; a mark of a lost stop is read in another that sees it."""
-    if asked.units.stops is None:
-        marks = np.delete(visits.marks, units)
-        return Visits(marks, np.arange(len(marks)), marks)
+    if _singly(asked, visits):
+        return one_by_one(np.delete(visits.marks, units))
     return asked.units.visits(np.delete(visits.unit, units))
+
+
+def _singly(asked: Question, visits: Visits) -> bool:
+    """Whether the visited units are marks, as in a listed set; then the loss of one leaves the others as they are."""
+    return asked.units.stops is None or np.array_equal(visits.unit, visits.marks)
 
 
 def with_losses(audit: Audit, asked: Question, visits: Visits) -> Audit:

@@ -153,8 +153,21 @@ class Plan:
         return len(self.sites) if self.stop_xy_mm is None else len(self.stop_xy_mm)
 
     @property
+    def counts(self) -> bool:
+        """Whether the fewest were sought: not the quickest panel, nor the best choice of a given number."""
+        return self.study.search.objective == "sites" and self.study.search.sites is None
+
+    @property
     def fewest_proven(self) -> bool:
-        return self.status == "proven"
+        return self.status == "proven" and self.counts
+
+    @property
+    def at_s(self) -> NDArray[np.float64] | None:
+        """The second at which each site is read, (n,); None without a route."""
+        if self.route is None:
+            return None
+        begins = self.route.at_s[self.route.order]
+        return begins if self.stop is None else begins[self.stop - 1]
 
     @property
     def at_least(self) -> int:
@@ -170,6 +183,11 @@ class Plan:
             return "cannot be met"
         if not self.audit.meets_limits:
             return f"at least {self.at_least} needed; no set found that meets every limit"
+        if self.study.search.sites is not None:
+            return f"{found}, as asked"
+        if not self.counts and self.route is not None:
+            proof = "quickest proven" if self.status == "proven" else f"no plan takes less than {self.seconds_at_least:.1f} s"
+            return f"{found} in {self.route.seconds:.1f} s, {proof}"
         if self.fewest_proven:
             return f"{found}, fewest proven"
         if self.at_least < count:
@@ -182,7 +200,8 @@ class SiteAudit:
     """A given site list against its study, and against the fewest plan.
 
     `droppable`: ids each of which alone could be dropped with every limit still met. `best_to_add`: the id that would
-    lower the worst ratio most, and that ratio, when a limit is missed. `fewest`: the plan that `plan` would give.
+    lower the worst ratio most, and that ratio, when a limit is missed. `fewest`: the plan that `plan` would give. `route`:
+    over the sites as listed, and `quickest` in the best order found. `chance`: what lost marks do.
     """
 
     study: Study
@@ -193,3 +212,11 @@ class SiteAudit:
     fewest: Plan | None
     d_efficiency: float
     warnings: tuple[str, ...]
+    route: Route | None = None
+    quickest: Route | None = None
+    chance: MissChance | None = None
+
+    @property
+    def at_s(self) -> NDArray[np.float64] | None:
+        """The second at which each site is read in the order listed, (n,)."""
+        return None if self.route is None else self.route.at_s

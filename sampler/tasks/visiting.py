@@ -52,6 +52,13 @@ def listed_route(asked: Question, rows: Indices) -> Route:
                   read_s=sites.seconds[rows])
 
 
+def best_route(asked: Question, rows: Indices) -> Route:
+    """The quickest route found over the same marks."""
+    sites = asked.candidates.sites
+    return plan_route(sites.xy_mm[rows], asked.study.machine, panel_size(asked), side=sites.side[rows],
+                      read_s=sites.seconds[rows], key=sites.id[rows], seed=asked.study.search.seed)
+
+
 def held(asked: Question, visits: Visits) -> bool:
     """Whether the audit of the visits meets every limit, also after the losses that must be borne."""
     if any(limit.ratio > MEETS for limit in limits_achieved(asked, knowledge_of(asked, visits))):
