@@ -103,3 +103,11 @@ def swap_gains(terms: list[Determinant], inverses: list[Array], chosen: Indices,
         for term, inverse in zip(terms, inverses, strict=True):
             total[part] += term.swaps(inverse, chosen, part if sites is None else sites[part])
     return total
+
+
+def best_swaps(terms: list[Determinant], inverses: list[Array], chosen: Indices) -> Array:
+    """The greatest change of log det that each site brings in the place of any of the chosen, (n,)."""
+    n = len(terms[0].rows)
+    step = max(1, CHUNK_NUMBERS // max(1, len(chosen)))
+    return np.concatenate([swap_gains(terms, inverses, chosen, np.arange(start, min(n, start + step))).max(axis=1)
+                           for start in range(0, n, step)])

@@ -16,7 +16,7 @@ import numpy as np
 from sampler.optimise.blocks import Array, Split
 from sampler.optimise.lost import ratios_after_loss
 from sampler.optimise.lost_variances import LostVariances
-from sampler.optimise.pool import TIE, Choice, Indices, Mask, Pool, cost_step, first_best, pool
+from sampler.optimise.pool import TIE, Choice, Indices, Mask, Pool, cost_step, first_best, key_rank, pool
 from sampler.optimise.problem import SiteProblem
 from sampler.optimise.variances import Variances, inverted, powers
 
@@ -224,8 +224,8 @@ def exchanges(split: Split, problem: SiteProblem, budget: float, *, weights: Arr
     share = np.zeros(problem.n) if weights is None else np.maximum(weights, 0.0)
     size = POOL_SIZE if not problem.lost else POOL_SIZE // 4
     if np.count_nonzero(keep) > size:
-        order = np.argsort(problem.key, kind="stable")
-        order = order[keep[order]]
+        order = np.flatnonzero(keep)
+        order = order[np.argsort(key_rank(problem)[order], kind="stable")]
         first = order[np.argsort(-share[order], kind="stable")[:size // 4]]
         keep = np.zeros(problem.n, bool)
         keep[first[share[first] > 0]] = True

@@ -12,10 +12,11 @@ from dataclasses import dataclass
 import numpy as np
 
 from sampler.optimise.blocks import Array, Split
-from sampler.optimise.determinant import determinants, swap_gains, value
+from sampler.optimise.determinant import best_swaps, determinants, swap_gains, value
 from sampler.optimise.exchange import FEASIBLE, LAST_RIDGE, Clock, Exchange, Stop
 from sampler.optimise.log_det import log_det_bound
-from sampler.optimise.pool import Choice, Indices, pool
+from sampler.optimise.lost import ratios_after_loss
+from sampler.optimise.pool import Choice, Indices, key_rank, pool
 from sampler.optimise.problem import SiteProblem
 
 SMALL_GAIN = 1e-9
@@ -57,16 +58,16 @@ class Climb:
                 continue
             gains = swap_gains(self.terms, inverses, choice.sites)
             gains[~choice.swappable(exchange.budget)] = -np.inf
-            pair = self._within_limits(choice, inverses, gains) if self.limited else _best_pair(gains)
+            pair = self._within_limits(choice, gains) if self.limited else _best_pair(gains)
             if pair is None:
                 return
             choice.swap(*pair)
 
-    def _within_limits(self, choice: Choice, inverses: list[Array], gain: Array) -> tuple[int, int] | None:
+    def _within_limits(self, choice: Choice, gain: Array) -> tuple[int, int] | None:
         """The pair (position, site) that gains most of those that keep every limit."""
         limits = self.exchange.limits
-        inverses = inverses[:len(self.exchange.split.blocks)]
-        dropped = limits.of(inverses) + limits.changes(inverses, choice.sites, -1.0)
+        held = limits.inverses(choice.sites, self.exchange.ridge(LAST_RIDGE))
+        dropped = limits.of(held) + limits.changes(held, choice.sites, -1.0)
         best, pair = SMALL_GAIN, None
         most = gain.max(axis=0)
         for position in np.argsort(-most, kind="stable"):
@@ -75,7 +76,7 @@ class Climb:
             sites = np.flatnonzero(gain[:, position] > best)
             active = dropped[position] > 1.0
             if active.any():
-                left = limits.without(inverses, int(choice.sites[position]))
+                left = limits.without(held, int(choice.sites[position]))
                 change = limits.changes(left, sites, 1.0, active)
                 sites = sites[(dropped[position, active] - change <= 1.0).all(axis=1)]
             for site in sites[np.argsort(-gain[sites, position], kind="stable")]:
@@ -88,7 +89,8 @@ class Climb:
         """Judged without the ridge."""
         sites = choice.sites.copy()
         sites[position] = site
-        return bool(self.exchange.split.ratios(self.exchange.pool.index[sites]).max(initial=0.0) <= FEASIBLE)
+        pool = self.exchange.pool
+        return bool(ratios_after_loss(self.exchange.split, pool.index[sites], pool.lost).max(initial=0.0) <= FEASIBLE)
 
     def start(self, uniform: bool) -> Choice | None:
         """A set on a peak of its own, and one that meets the limits if it must."""
@@ -183,7 +185,7 @@ def _finish(split: Split, problem: SiteProblem, budget: float, limited: bool, ch
     terms = determinants(split, problem)
     while not clock.over():
         ridge = LAST_RIDGE * len(chosen) / problem.n
-        gains = swap_gains(terms, [term.inverse(chosen, ridge) for term in terms], chosen).max(axis=1)
+        gains = best_swaps(terms, [term.inverse(chosen, ridge) for term in terms], chosen)
         climb = _climb(split, problem, budget, limited, chosen, weights, gains, rng, clock)
         source = climb.exchange.pool
         choice = Choice(source, source.places(chosen))
@@ -200,10 +202,18 @@ def _climb(split: Split, problem: SiteProblem, budget: float, limited: bool, cho
     """A climb in a pool of the candidates of greatest gain, and of the chosen."""
     size = int(np.clip(POOL_PER_SITE * budget / problem.cost.mean(), LEAST_POOL, MOST_POOL))
     allowed = np.flatnonzero(~problem.forbidden)
-    keep = allowed[np.lexsort((problem.key[allowed], -gains[allowed]))[:size]]
+    keep = allowed[_greatest(gains[allowed], key_rank(problem)[allowed], size)]
     for members, low in zip(problem.rules.members, problem.rules.lower, strict=True):
         if low > 0:
-            keep = np.append(keep, members[np.argsort(-gains[members], kind="stable")[:size // 4]])
+            keep = np.append(keep, members[_greatest(gains[members], key_rank(problem)[members], size // 4)])
     source = pool(split, problem, np.append(keep, chosen))
     likely = np.maximum(weights[source.index], 0.0) + 0.05 * budget / max(len(source.index), 1)
     return Climb(Exchange(split, source, budget, likely, rng, clock), problem, limited)
+
+
+def _greatest(gains: Array, rank: Indices, size: int) -> Indices:
+    """Positions of the greatest gains; of equal ones those of the first keys."""
+    if len(gains) <= size:
+        return np.arange(len(gains))
+    near = np.flatnonzero(gains >= np.partition(gains, -size)[-size])
+    return near[np.lexsort((rank[near], -gains[near]))[:size]]

@@ -25,7 +25,7 @@ import numpy as np
 from sampler.optimise.blocks import Array, Split
 from sampler.optimise.determinant import Determinant, determinants, offset, value
 from sampler.optimise.log_det_path import Concave, climb_path
-from sampler.optimise.pool import Indices
+from sampler.optimise.pool import Indices, key_rank
 from sampler.optimise.problem import SiteProblem
 from sampler.optimise.rows import separate
 from sampler.optimise.variances import information, inverted, weighted_information
@@ -39,7 +39,7 @@ PENALTY, MOST_PENALTY = 100.0, 1e7
 """First price of missing the limits by 1, per direction; grows tenfold while some excess is left."""
 EXCESS = 1e-6
 RIDGE = 1e-6
-FIRST_STEPS = 12
+FIRST_STEPS, FIRST_SITES = 12, 20_000
 MORE_COLUMNS = 100
 WATCHED = 64
 ROUNDS = 30
@@ -77,6 +77,8 @@ class _Bounder:
     def __init__(self, split: Split, problem: SiteProblem, budget: float, limited: bool, deadline: float) -> None:
         self.split, self.problem, self.budget, self.deadline = split, problem, budget, deadline
         self.required = np.flatnonzero(problem.required)
+        self.free = ~problem.required & ~problem.forbidden
+        self.rank = key_rank(problem)
         self.terms = determinants(split, problem)
         self.limits = np.arange(split.limits if limited else 0)
         self.watch = self.limits
@@ -103,8 +105,7 @@ class _Bounder:
             self.watch = np.union1d(np.argsort(-ratio, kind="stable")[:WATCHED // 2],
                                     np.arange(0, len(ratio), len(ratio) // (WATCHED // 2)))
         penalty = PENALTY * sum(block.q for block in self.split.blocks)
-        free = ~self.problem.required & ~self.problem.forbidden
-        columns = np.flatnonzero((weights > 0) & free)
+        columns = np.flatnonzero((weights > 0) & self.free)
         tolerance = FIRST_GAP
         for _ in range(ROUNDS):
             if self.over() or not len(columns):
@@ -120,7 +121,7 @@ class _Bounder:
             # What pays is judged by what the budget is worth to all sites and, when nothing does, to the columns alone.
             for priced in (price, np.where(known, price, 0.0)):
                 gains = price - self._knapsack(priced)[2] * self.problem.cost
-                paying = np.setdiff1d(np.flatnonzero((gains > tolerance / self.budget) & free), columns)
+                paying = np.setdiff1d(np.flatnonzero((gains > tolerance / self.budget) & self.free), columns)
                 if len(paying):
                     break
             ratio = self._ratios(weights)
@@ -133,7 +134,7 @@ class _Bounder:
             tolerance = max(GAP, tolerance / TIGHTENING)
             if lax and not len(paying) and penalty < MOST_PENALTY:
                 penalty *= 10.0
-            order = np.lexsort((self.problem.key[paying], -gains[paying]))
+            order = np.lexsort((self.rank[paying], -gains[paying]))
             columns = np.union1d(columns, paying[order[:MORE_COLUMNS]])
             self.watch = np.union1d(self.watch, missed[np.argsort(-ratio[missed], kind="stable")[:WATCHED]])
         return self.best
@@ -157,14 +158,15 @@ class _Bounder:
         return separate(self.split, self._matrices(weights)[:len(self.split.blocks)])[1]
 
     def _first_weights(self) -> Array:
-        """What a few steps of Frank and Wolfe (1956) on log det alone take."""
-        problem, share = self.problem, min(1.0, self.budget / self.problem.cost.sum())
-        weights = np.where(problem.forbidden, 0.0, np.where(problem.required, 1.0, share))
-        taken = np.zeros(problem.n)
+        """What a few steps of Frank and Wolfe (1956) on log det alone take, of sites spread over the order of the keys."""
+        sites = np.flatnonzero(self.free)
+        sites = sites[np.argsort(self.rank[sites], kind="stable")][::-(-len(sites) // FIRST_SITES) or 1]
+        weights, taken = self.problem.required.astype(float), np.zeros(self.problem.n)
+        weights[sites] = min(1.0, self.budget / max(float(self.problem.cost[sites].sum()), float(np.finfo(float).tiny)))
         for step in range(1, FIRST_STEPS + 1):
-            slope = np.zeros(problem.n)
+            slope = np.zeros(self.problem.n)
             for term, matrix in zip(self.terms, self._matrices(weights), strict=True):
-                slope += term.slope(inverted(matrix), slice(None))
+                slope[sites] += term.slope(inverted(matrix), sites)
             best = self._knapsack(slope)[0]
             weights += 2.0 / (step + 2.0) * (best - weights)
             taken += best
@@ -174,9 +176,14 @@ class _Bounder:
         """The w within bounds and budget that maximises price · w, that maximum, and the price of the budget."""
         problem = self.problem
         weights = problem.required.astype(float)
-        use = np.flatnonzero((price > 0) & ~problem.required & ~problem.forbidden)
-        order = use[np.lexsort((problem.key[use], -price[use] / problem.cost[use]))]
-        left = self.budget - problem.cost @ weights
+        left = self.budget - float(problem.cost @ weights)
+        use = np.flatnonzero((price > 0) & self.free)
+        each = price[use] / problem.cost[use]
+        enough = int(max(left, 0.0) / problem.cost.min()) + 2
+        if len(use) > enough:
+            best = each >= np.partition(each, -enough)[-enough]
+            use, each = use[best], each[best]
+        order = use[np.lexsort((self.rank[use], -each))]
         cost = problem.cost[order]
         before = np.cumsum(cost) - cost
         weights[order] = np.clip((left - before) / cost, 0.0, 1.0)

@@ -63,7 +63,7 @@ def pool(split: Split, problem: SiteProblem, keep: Indices | None = None) -> Poo
     if keep is not None:
         wanted[keep] = True
     index = np.flatnonzero((wanted & ~problem.forbidden) | problem.required)
-    index = index[np.argsort(problem.key[index], kind="stable")]
+    index = index[np.argsort(key_rank(problem)[index], kind="stable")]
     place = np.full(problem.n, -1)
     place[index] = np.arange(len(index))
     rules = problem.rules
@@ -184,6 +184,16 @@ class Choice:
             given = (source.members[tight].T @ chosen[tight]).toarray()
             allowed &= given >= needed
         return allowed
+
+
+def key_rank(problem: SiteProblem) -> Indices:
+    """The place of each site in the order of the keys, (n,)."""
+    key = problem.key
+    if np.all(key[:-1] <= key[1:]):
+        return np.arange(problem.n)
+    rank = np.empty(problem.n, np.int64)
+    rank[np.argsort(key, kind="stable")] = np.arange(problem.n)
+    return rank
 
 
 def first_best(score: Array, best: float) -> int:
