@@ -11,7 +11,7 @@ from invented_plans import core_layout
 from sampler.errors import InputError
 from sampler.model.basis import Model, ModelTerm
 from sampler.model.terms import FAMILIES
-from sampler.tasks.question import achieved, everything, knowledge_of, problem_of, question
+from sampler.tasks.question import achieved, everything, problem_of, question
 from sampler.tasks.study import CellRule, Measure, RegionLimit, Rules, Study, TermLimit, ZoneRule
 from sampler.tasks.units import correlated
 from sampler.uncertainty.noise import Noise
