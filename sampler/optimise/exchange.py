@@ -16,7 +16,19 @@ import numpy as np
 from sampler.optimise.blocks import Array, Split
 from sampler.optimise.lost import ratios_after_loss
 from sampler.optimise.lost_variances import LostVariances
-from sampler.optimise.pool import TIE, Choice, Indices, Mask, Pool, cost_step, first_best, key_rank, pool
+from sampler.optimise.pool import (
+    TIE,
+    TIE_DIGITS,
+    Choice,
+    Indices,
+    Mask,
+    Pool,
+    ascending,
+    cost_step,
+    first_best,
+    key_rank,
+    pool,
+)
 from sampler.optimise.problem import SiteProblem
 from sampler.optimise.variances import Variances, inverted, powers
 
@@ -80,7 +92,7 @@ class Exchange:
             inverses = [inverted((rows * self.weights[:, None, None]).reshape(-1, block.q).T
                                       @ rows.reshape(-1, block.q) + block.prior + self.ridge(1e-6) * np.eye(block.q))
                         for rows, block in zip(self.pool.rows, split.blocks, strict=True)]
-            tight = np.argsort(-Variances(split, self.pool, self.watch).of(inverses), kind="stable")[:WATCHED // 2]
+            tight = ascending(Variances(split, self.pool, self.watch).of(inverses))[-WATCHED // 2:]
             self.watch = np.union1d(tight, np.arange(0, split.limits, split.limits // (WATCHED // 2)))
         self.limits = self._scored()
 
@@ -95,7 +107,7 @@ class Exchange:
     def ratios(self, choice: Choice) -> Array:
         """Every limit's ratio; the worst one that is not watched is watched from now on."""
         ratios = ratios_after_loss(self.split, self.pool.index[choice.sites], self.pool.lost)
-        worst = int(ratios.argmax()) if len(ratios) else 0
+        worst = first_best(ratios, ratios.max()) if len(ratios) else 0
         if len(ratios) > len(self.watch) and worst not in self.watch and ratios[worst] > ratios[self.watch].max():
             self.watch = np.append(self.watch, worst)
             self.limits = self._scored()
@@ -156,7 +168,7 @@ class Exchange:
             score = ((variance / worst) ** exponent).sum()
             dropped = variance + limits.changes(inverses, choice.sites, -1.0)
             allowed = choice.swappable(self.budget)
-            for position in np.argsort(powers(dropped / worst, exponent).sum(axis=1), kind="stable"):
+            for position in ascending(powers(dropped / worst, exponent).sum(axis=1)):
                 site = self._best(inverses, dropped[position] / worst, worst, int(choice.sites[position]),
                                   allowed[:, position], exponent, score)
                 if site < 0:
@@ -209,7 +221,7 @@ class Exchange:
             while least > FEASIBLE and misses < patience and not self.clock.over():
                 other, worst = self.improve(self.kick(best))
                 misses = 0 if worst < least * (1.0 - SMALL_CHANGE) else misses + 1
-                if worst <= least:
+                if worst <= least * (1.0 + TIE):
                     best, least = other, worst
         return best, least
 
@@ -275,7 +287,7 @@ def prune(split: Split, problem: SiteProblem, chosen: Indices) -> Indices:
         options, worst = options[worst <= FEASIBLE], worst[worst <= FEASIBLE]
         if not len(options):
             break
-        choice.drop(int(options[np.lexsort((worst, -source.cost[choice.sites[options]]))[0]]))
+        choice.drop(int(options[np.lexsort((np.round(worst, TIE_DIGITS), -source.cost[choice.sites[options]]))[0]]))
     return np.sort(source.index[choice.sites])
 
 

@@ -19,6 +19,7 @@ COST_TOLERANCE = 1e-9
 """Costs are sums of floats; a set may exceed its budget by this share of it."""
 TIE = 1e-9
 """Scores closer than this, relative to their size, tie: the rounding of two orders of summation must not decide."""
+TIE_DIGITS = 9
 
 
 @dataclass(frozen=True, slots=True)
@@ -198,7 +199,15 @@ def key_rank(problem: SiteProblem) -> Indices:
 
 def first_best(score: Array, best: float) -> int:
     """The first position whose score ties with the best (the least, or the greatest)."""
+    if not np.isfinite(best):
+        return int(np.argmax(score == best))
     return int(np.argmax(np.abs(score - best) <= TIE * max(abs(best), np.finfo(float).tiny)))
+
+
+def ascending(score: Array) -> Indices:
+    """Positions in the order of positive scores; those that tie keep their order."""
+    with np.errstate(divide="ignore"):
+        return np.argsort(np.round(np.log(score), TIE_DIGITS), kind="stable")
 
 
 def cost_step(cost: Array) -> float | None:
