@@ -13,6 +13,7 @@ from sampler.cli.shared import (
     json_option,
     out_option,
     progress_on_terminal,
+    site_options,
     study_argument,
 )
 
@@ -22,8 +23,9 @@ from sampler.cli.shared import (
 @click.option("--sites", required=True, type=click.Path(), metavar="FILE.csv",
               help="The sites to audit: a CSV with an id column.")
 @out_option
+@site_options
 @json_option
-def command(study: str, sites: str, out: str, as_json: bool) -> None:
+def command(study: str, sites: str, out: str, frame: str, route: bool | None, as_json: bool) -> None:
     """Tells what the sites of FILE.csv achieve under STUDY, and how far they are from the fewest.
 
     Exit status 3 when the sites miss a limit.
@@ -37,12 +39,13 @@ def command(study: str, sites: str, out: str, as_json: bool) -> None:
 
     asked = read_study(study)
     ids = read_site_ids(sites)
+    drawn = asked.machine_stated if route is None else route
     show = progress_on_terminal()
     with interruptible() as stop:
         result = audit(asked, ids, progress=show, stop=stop)
         end_progress(show)
         text = audit_json(result)
-        write_results(out, {"audit.json": text, "sites.csv": sites_csv(result), **audit_map(result)})
+        write_results(out, {"audit.json": text, "sites.csv": sites_csv(result, frame), **audit_map(result, route=drawn)})
     click.echo(text if as_json else audit_summary(result))
     if not result.audit.meets_limits:
         sys.exit(CANNOT_BE_MET)

@@ -13,6 +13,7 @@ from sampler.cli.shared import (
     json_option,
     out_option,
     progress_on_terminal,
+    site_options,
     study_argument,
 )
 
@@ -20,8 +21,9 @@ from sampler.cli.shared import (
 @click.command("plan")
 @study_argument
 @out_option
+@site_options
 @json_option
-def command(study: str, out: str, as_json: bool) -> None:
+def command(study: str, out: str, frame: str, route: bool | None, as_json: bool) -> None:
     """Finds the fewest sites that meet every limit of STUDY, proves it, and writes plan.json, sites.csv and the map.
 
     Ctrl-C ends the search with the best plan so far and its bound.
@@ -34,12 +36,14 @@ def command(study: str, out: str, as_json: bool) -> None:
     from sampler.tasks.plan import plan
 
     asked = read_study(study)
+    drawn = asked.machine_stated if route is None else route
     show = progress_on_terminal()
     with interruptible() as stop:
         result = plan(asked, progress=show, stop=stop)
         end_progress(show)
         text = plan_json(result)
-        files: dict[str, bytes | str] = {"plan.json": text, "sites.csv": sites_csv(result), **plan_map(result)}
+        files: dict[str, bytes | str] = {"plan.json": text, "sites.csv": sites_csv(result, frame),
+                                         **plan_map(result, route=drawn)}
         if result.certificate:
             files["certificate.json"] = encode_certificate(result.certificate)
         write_results(out, files)

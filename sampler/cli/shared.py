@@ -20,6 +20,17 @@ json_option = click.option("--json", "as_json", is_flag=True, help="Print the re
 SECONDS_BETWEEN_LINES = 0.2
 
 
+def site_options(command: Callable[..., Any]) -> Callable[..., Any]:
+    """How sites are written and drawn."""
+    for option in (
+            click.option("--route/--no-route", default=None, help="Draw the route on the map; by default when the study has a "
+                                                                  "[machine]."),
+            click.option("--frame", type=click.Choice(["panel", "machine"]), default="panel", show_default=True,
+                         help="Frame of the coordinates in sites.csv.")):
+        command = option(command)
+    return command
+
+
 def start_options(command: Callable[..., Any]) -> Callable[..., Any]:
     """What an engineer says of a bare list of marks instead of having it guessed."""
     for option in (
@@ -86,3 +97,18 @@ def end_progress(show: Callable[..., Any] | None) -> None:
     """Clears the progress line."""
     if show is not None:
         click.echo("\r\x1b[K", err=True, nl=False)
+
+
+@contextmanager
+def saying() -> Iterator[Callable[[str], None]]:
+    """Gives `tell(text)`, one line on stderr rewritten in place; nothing when stderr is not a terminal."""
+    terminal = sys.stderr.isatty()
+
+    def tell(text: str) -> None:
+        if terminal:
+            click.echo(f"\r{text} ...\x1b[K", err=True, nl=False)
+
+    try:
+        yield tell
+    finally:
+        end_progress(tell if terminal else None)

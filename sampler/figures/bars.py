@@ -9,7 +9,7 @@ from matplotlib.axes import Axes
 from matplotlib.patches import Rectangle
 
 from sampler.figures import style
-from sampler.tasks.results import AuditedLimit
+from sampler.tasks.results import MEETS, AuditedLimit
 from sampler.tasks.wording import against, plain, share
 
 MOST_BARS = 20
@@ -25,7 +25,7 @@ def shown_limits(limits: tuple[AuditedLimit, ...]) -> tuple[AuditedLimit, ...]:
     """The limits that get a bar: all in the study's order, or the tightest twenty, tightest first."""
     if len(limits) <= MOST_BARS:
         return limits
-    return tuple(sorted(limits, key=lambda limit: -limit.ratio)[:MOST_BARS])
+    return tuple(sorted(limits, key=lambda limit: -limit.worst_ratio)[:MOST_BARS])
 
 
 def bars_height(limits: tuple[AuditedLimit, ...]) -> float:
@@ -42,7 +42,8 @@ def draw_bars(axes: Axes, limits: tuple[AuditedLimit, ...], coverage_factor: flo
     width, height = size_in
     axes.set(xlim=(0, width), ylim=(height, 0))
     axes.set_axis_off()
-    axes.text(0, 0.10, f"Predicted k·u against its limit (k = {coverage_factor:g})", fontsize=style.TEXT_PT,
+    after = "k·u after the worst loss" if any(np.isfinite(limit.after_loss) for limit in limits) else "Predicted k·u"
+    axes.text(0, 0.10, f"{after} against its limit (k = {coverage_factor:g})", fontsize=style.TEXT_PT,
               va="center", fontweight="bold")
     shown = shown_limits(limits)
     if not shown:
@@ -51,7 +52,7 @@ def draw_bars(axes: Axes, limits: tuple[AuditedLimit, ...], coverage_factor: flo
     if len(shown) < len(limits):
         axes.text(0, 0.29, f"tightest {len(shown)} of {len(limits)} limits", fontsize=style.SMALL_PT + 0.5, va="center",
                   color=style.SOFT)
-    worst = max((limit.ratio for limit in shown if np.isfinite(limit.ratio)), default=1.0)
+    worst = max((limit.worst_ratio for limit in shown if np.isfinite(limit.worst_ratio)), default=1.0)
     per_share = width / min(max(1.12, worst * 1.02), _GREATEST_SHARE)
     pitch = min(_ROW_IN, (height - _HEAD_IN - _FOOT_IN) / len(shown))
     for row, limit in enumerate(shown):
@@ -66,19 +67,20 @@ def draw_bars(axes: Axes, limits: tuple[AuditedLimit, ...], coverage_factor: flo
 
 
 def _draw_row(axes: Axes, limit: AuditedLimit, top: float, width: float, per_share: float) -> None:
-    over = not limit.ratio <= 1.0
-    predicted, maximum = against(limit.predicted, limit.maximum)
-    if not np.isfinite(limit.ratio):
+    ratio = limit.worst_ratio
+    over = not ratio <= MEETS
+    predicted, maximum = against(ratio * limit.maximum, limit.maximum)
+    if not np.isfinite(ratio):
         value = f"not determined (limit {maximum} {limit.unit})"
     else:
         # A bar that leaves the axes shows where it ends only by its number.
-        tail = f" ({share(limit.ratio)})" if limit.ratio * per_share > width else ""
+        tail = f" ({share(ratio)})" if ratio * per_share > width else ""
         value = f"{predicted} of {maximum} {limit.unit}{tail}"
     weight = "bold" if over else "normal"
     room = int(width / _LETTER_IN) - len(value) - 2
     axes.text(0, top + 0.09, plain(limit.label, max(8, room)), fontsize=style.TEXT_PT - 0.5, va="center")
     axes.text(width, top + 0.09, value, fontsize=style.TEXT_PT - 0.5, va="center", ha="right", fontweight=weight)
-    length = min(limit.ratio * per_share, width) if np.isfinite(limit.ratio) else width
+    length = min(ratio * per_share, width) if np.isfinite(ratio) else width
     bar: dict[str, Any] = {"facecolor": style.ALARM, "hatch": "//////", "edgecolor": style.PAPER}
     if not over:
         bar = {"facecolor": style.FILL}

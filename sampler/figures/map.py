@@ -22,12 +22,13 @@ from sampler.figures.labels import place_labels
 from sampler.panel.candidates import Candidates
 from sampler.panel.layout import Layout
 from sampler.panel.thinning import thinned
-from sampler.tasks.results import Audit, Plan, SiteAudit
+from sampler.tasks.results import MEETS, Audit, Plan, SiteAudit
 from sampler.tasks.study import Study
 from sampler.tasks.wording import plain, share, significant
 
 Array = NDArray[np.float64]
 
+BACK = "back"
 MOST_NUMBERS = 100
 MOST_DOTS = 4900
 MANY_DOTS = 1000
@@ -47,7 +48,10 @@ _POINTS = 72.0
 
 @dataclass(frozen=True, slots=True)
 class _Scene:
-    """What one map shows. `numbered`: the sites are a choice in an order; otherwise all candidates are meant."""
+    """What one map shows. `numbered`: the sites are a choice in an order; otherwise all candidates are meant.
+
+    `stop` (n,) is the stop of each site, from 1, and `stop_xy_mm` where each stands, when a stop reads several marks.
+    """
 
     study: Study
     candidates: Candidates
@@ -56,6 +60,13 @@ class _Scene:
     numbered: bool
     order: str
     route: bool
+    stop: NDArray[np.int64] | None = None
+    stop_xy_mm: Array | None = None
+
+    @property
+    def sides(self) -> bool:
+        """Whether both sides of the panel are measured, so that marks must tell on which they lie."""
+        return len(np.unique(self.candidates.sites.side)) > 1
 
     @property
     def layout(self) -> Layout:
@@ -74,13 +85,13 @@ def plan_map(plan: Plan, *, route: bool = False) -> dict[str, bytes]:
     met = plan.status != "cannot"
     answer = plan.answer if met else f"cannot be met, even with all {len(plan.sites):,} candidates measured"
     return _map(_Scene(plan.study, plan.candidates, plan.audit, f"{answer}; {_worst(plan.audit)}", met,
-                       "in visiting order", route and met))
+                       "in visiting order", route and met, plan.stop if met else None, plan.stop_xy_mm if met else None))
 
 
 def audit_map(result: SiteAudit, *, route: bool = False) -> dict[str, bytes]:
     """`map.png` and `map.svg` of a given site list; `route` joins the sites in the order of the list."""
     audit = result.audit
-    missed = sum(not limit.ratio <= 1.0 for limit in audit.limits)
+    missed = sum(not limit.worst_ratio <= MEETS for limit in audit.limits)
     verdict = f"{missed} of {len(audit.limits)} limits missed" if missed else "every limit met"
     fewest = f"; fewest plan: {result.fewest.answer}" if result.fewest is not None else ""
     return _map(_Scene(result.study, result.candidates, audit,
@@ -96,7 +107,7 @@ def _worst(audit: Audit) -> str:
     if not audit.limits:
         return "no limits set"
     worst = audit.worst
-    return f"tightest limit {plain(worst.label, 40)} " + (f"at {share(worst.ratio)}" if np.isfinite(worst.ratio) else
+    return f"tightest limit {plain(worst.label, 40)} " + (f"at {share(worst.worst_ratio)}" if np.isfinite(worst.worst_ratio) else
                                                           "not determined")
 
 
@@ -219,9 +230,15 @@ def _draw_marks(axes: Axes, scene: _Scene, origin: Array) -> list[Artist]:
     crosses: dict[str, Any] = {"marker": "x", "markersize": 2.6, "color": style.FAINT, "markeredgewidth": 0.5}
     dots: dict[str, Any] = {"marker": "o", "markersize": 2.0 if len(free) < MANY_DOTS else 1.3, "color": style.SOFT,
                             "markeredgewidth": 0.0}
-    for xy, most, one, many, look in (
-            (others, MOST_OTHER_DOTS, "mark that is no candidate", "marks that are no candidates", crosses),
-            (free, MOST_DOTS, "candidate", "candidates", dots)):
+    groups = [(others, MOST_OTHER_DOTS, "mark that is no candidate", "marks that are no candidates", crosses)]
+    if scene.sides:
+        back = scene.candidates.sites.side == BACK
+        rings = dots | {"marker": "D", "markerfacecolor": "none", "markeredgecolor": style.SOFT, "markeredgewidth": 0.5}
+        groups += [(free[~back], MOST_DOTS // 2, "candidate on the front", "candidates on the front", dots),
+                   (free[back], MOST_DOTS // 2, "candidate on the back", "candidates on the back", rings)]
+    else:
+        groups.append((free, MOST_DOTS, "candidate", "candidates", dots))
+    for xy, most, one, many, look in groups:
         if len(xy) == 0:
             continue
         drawn = thinned(xy, most)
@@ -240,25 +257,36 @@ def _draw_sites(axes: Axes, scene: _Scene, origin: Array, points_per_mm: float) 
     xy = sites.xy_mm - origin
     n = len(sites)
     look: dict[str, Any]
-    if scene.route and n > 1:
-        for colour, width, order in ((style.PAPER, 2.6, 5.5), (style.INK, 0.9, 5.6)):
-            axes.plot(*xy.T, color=colour, linewidth=width, zorder=order, alpha=0.85, scalex=False, scaley=False)
-        legend.append(Line2D([], [], color=style.INK, linewidth=0.9, label="route"))
+    stands, stand_side = xy, sites.side
+    if scene.stop is not None and scene.stop_xy_mm is not None:
+        stands = scene.stop_xy_mm - origin
+        stand_side = sites.side[[int(np.argmax(scene.stop == number)) for number in range(1, len(stands) + 1)]]
+        legend += _draw_fields(axes, stands, scene)
+    if scene.route and len(stands) > 1:
+        legend += _draw_route(axes, stands, stand_side)
     if n and scene.numbered:
         size = float(np.clip(5.6 * np.sqrt(MOST_NUMBERS / max(n, MOST_NUMBERS)), 2.6, 5.6))
-        look = {"linestyle": "none", "markersize": size, "markerfacecolor": style.INK,
-                "markeredgecolor": style.PAPER, "markeredgewidth": 0.7}
+        filled: dict[str, Any] = {"linestyle": "none", "markersize": size, "markerfacecolor": style.INK,
+                                  "markeredgecolor": style.PAPER, "markeredgewidth": 0.7}
+        hollow = filled | {"markerfacecolor": style.PAPER, "markeredgecolor": style.INK, "markeredgewidth": 1.3}
         drawn = thinned(xy, MOST_DOTS)
-        required = np.isin(sites.id[drawn], np.asarray(scene.study.rules.required, dtype=str))
-        note = f", numbered {scene.order}" if n <= MOST_NUMBERS else ""
-        for rows, marker, label in ((drawn[~required], "o", f"{_count(n, 'site')}{note}"),
-                                    (drawn[required], "s", "required site")):
+        rules = scene.study.rules
+        required = np.isin(sites.id, np.asarray(rules.required, dtype=str)) | np.isin(sites.kind, rules.required_kinds)
+        back = (sites.side == BACK) & scene.sides
+        note = f", numbered {scene.order}" if len(stands) <= MOST_NUMBERS else ""
+        fields = "" if scene.stop is None else f" in {_count(len(stands), 'stop')}"
+        for shown, marker, look, label in (
+                (~required & ~back, "o", filled, f"{_count(int((~back).sum()) if back.any() else n, 'site')}"
+                 f"{' on the front' if back.any() else fields + note}"),
+                (~required & back, "D", hollow, f"{_count(int(back.sum()), 'site')} on the back"),
+                (required, "s", filled, "required site")):
+            rows = drawn[shown[drawn]]
             if len(rows):
                 axes.plot(*xy[rows].T, marker=marker, zorder=6, scalex=False, scaley=False, **look)
                 legend.append(Line2D([], [], marker=marker, label=label, **look))
-        if n <= MOST_NUMBERS:
+        if len(stands) <= MOST_NUMBERS:
             outline = scene.layout.outline_mm - origin
-            _draw_numbers(axes, xy, outline.min(axis=0), outline.max(axis=0), points_per_mm)
+            _draw_numbers(axes, stands, outline.min(axis=0), outline.max(axis=0), points_per_mm)
     worst = scene.audit.worst_position
     if worst.where_mm is not None and np.isfinite(worst.predicted):
         look = {"linestyle": "none", "marker": "^", "markersize": 8.5, "markerfacecolor": style.PAPER,
@@ -266,6 +294,32 @@ def _draw_sites(axes: Axes, scene: _Scene, origin: Array, points_per_mm: float) 
         axes.plot(*(np.asarray(worst.where_mm) - origin), zorder=5.8, scalex=False, scaley=False, **look)
         legend.append(Line2D([], [], label=f"worst position, {worst.axis} {significant(worst.predicted)} µm", **look))
     return legend
+
+
+def _draw_route(axes: Axes, xy: Array, side: NDArray[np.str_]) -> list[Artist]:
+    """The way from stand to stand, dashed on the back and broken where the panel is turned over; returns legend entries."""
+    cuts = np.flatnonzero(side[1:] != side[:-1]) + 1
+    legend: list[Artist] = []
+    for part, where in zip(np.split(xy, cuts), np.split(side, cuts), strict=True):
+        dashes = (0, (4, 2)) if where[0] == BACK and len(cuts) else "-"
+        for colour, width, order in ((style.PAPER, 2.6, 5.5), (style.INK, 0.9, 5.6)):
+            axes.plot(*part.T, color=colour, linewidth=width, zorder=order, alpha=0.85, scalex=False, scaley=False,
+                      linestyle=dashes if colour == style.INK else "-")
+        label = f"route on the {where[0]}" if len(cuts) else "route"
+        legend.append(Line2D([], [], color=style.INK, linewidth=0.9, linestyle=dashes, label=label))
+    return legend
+
+
+def _draw_fields(axes: Axes, stands: Array, scene: _Scene) -> list[Artist]:
+    """The field of view at each stop; returns its legend entry."""
+    field = scene.study.measure.field_of_view_mm
+    if field is None:
+        return []
+    corners = np.array([[-1, -1], [1, -1], [1, 1], [-1, 1]]) * np.asarray(field) / 2
+    axes.add_collection(PolyCollection(list(stands[:, None] + corners), facecolors="none", edgecolors=style.INK,
+                                       linewidths=0.7, zorder=5.9), autolim=False)
+    return [Patch(facecolor="none", edgecolor=style.INK, linewidth=0.7,
+                  label=f"field of view, {field[0]:g} × {field[1]:g} mm")]
 
 
 def _draw_numbers(axes: Axes, xy: Array, low: Array, high: Array, points_per_mm: float) -> None:

@@ -20,13 +20,17 @@ from sampler import __version__
 from sampler.errors import InputError
 from sampler.files.source import shown_path
 from sampler.panel.layout import Layout, Sites
-from sampler.tasks.results import Audit, AuditedLimit, Plan, SiteAudit
+from sampler.route.machine import SIDES, to_machine_frame
+from sampler.route.visit import Route
+from sampler.tasks.advise import notes
+from sampler.tasks.results import Audit, AuditedLimit, MissChance, Plan, SiteAudit
 from sampler.tasks.study import Study
 
 RESULT_FILES = ("plan.json", "certificate.json", "audit.json", "sites.csv", "map.png", "map.svg")
 """Files that a result consists of: a new result in the same folder replaces or removes them all."""
 COORDINATE_DIGITS = 9
 """Digits after the point of mm: the noise of moving the origin goes, a femtometre stays."""
+SECOND_DIGITS = 3
 NOT_DETERMINED = "not determined by these sites"
 BEFORE, AFTER, READY = ".sampler-before-", ".sampler-after-", ".sampler-ready-"
 
@@ -44,8 +48,10 @@ def plan_json(plan: Plan) -> str:
         "d_efficiency_at_least": _finite(plan.d_efficiency_at_least),
         "meets_limits": not cannot and plan.audit.meets_limits,
         "predicted_with": "all candidates" if cannot else "sites", **_audited(plan.study.layout, plan.audit),
-        "sites": _sites(plan.study.layout, sites), "not_candidates": plan.candidates.counts(),
-        "advice": list(plan.advice), "warnings": list(plan.warnings), "interrupted": plan.interrupted,
+        **_chance(plan.chance), **_panel(plan.study, plan.route, seconds_at_least=_finite(plan.seconds_at_least)),
+        **_stops(plan), "sites": _sites(plan.study, sites, plan.stop, None if cannot else plan.at_s),
+        "not_candidates": plan.candidates.counts(), "advice": list(plan.advice), "notes": list(notes(plan.study)),
+        "warnings": list(plan.warnings), "interrupted": plan.interrupted,
         "seconds": round(plan.seconds, 3), "seed": plan.study.search.seed})
 
 
@@ -61,31 +67,89 @@ def audit_json(result: SiteAudit) -> str:
         "fewest": None if fewest is None else {
             "status": fewest.status, "n_sites": None if fewest.status == "cannot" else len(fewest.sites),
             "lower_bound": _finite(fewest.lower_bound), "fewest_proven": fewest.fewest_proven},
-        **_audited(result.study.layout, result.audit), "sites": _sites(result.study.layout, result.audit.sites),
-        "warnings": list(result.warnings)})
+        **_audited(result.study.layout, result.audit), **_chance(result.chance),
+        **_panel(result.study, result.route, quickest=None if result.quickest is None else _rounded(result.quickest.seconds)),
+        "sites": _sites(result.study, result.audit.sites, None, result.at_s),
+        "notes": list(notes(result.study)), "warnings": list(result.warnings)})
 
 
-def sites_csv(result: Plan | SiteAudit) -> str:
-    """The site list in visiting order, in the layout's own frame; only its header when there is no plan."""
-    layout, sites = result.study.layout, result.audit.sites
+def sites_csv(result: Plan | SiteAudit, frame: str = "panel") -> str:
+    """The site list in visiting order; only its header when there is no plan.
+
+    `frame` "panel": in the layout's own frame; "machine": as the study's machine sees the panel, turned over for the far
+    side. Stops and the second of each read are listed when the study has them.
+    """
+    study, sites = result.study, result.audit.sites
+    stop = at_s = None
     if isinstance(result, Plan) and result.status == "cannot":
         sites = sites.take(np.zeros(0, np.int64))
+    else:
+        stop = result.stop if isinstance(result, Plan) else None
+        at_s = result.at_s if study.machine_stated else None
+    axes = ("x_mm", "y_mm") if frame == "panel" else ("machine_x_mm", "machine_y_mm")
+    far = sites.side == SIDES[1]
+    columns: dict[str, list[Any]] = {"order": list(range(1, len(sites) + 1)), "id": sites.id.tolist()}
+    columns |= dict(zip(axes, _framed(study, sites.xy_mm, far, frame).T.tolist(), strict=True))
+    columns |= {"side": sites.side.tolist(), "kind": sites.kind.tolist()}
+    if stop is not None and isinstance(result, Plan) and result.stop_xy_mm is not None:
+        stands = _framed(study, result.stop_xy_mm[stop - 1], far, frame)
+        columns |= {"stop": stop.tolist(), **dict(zip((f"stop_{axis}" for axis in axes), stands.T.tolist(), strict=True))}
+    if at_s is not None:
+        columns["at_s"] = [_rounded(value) for value in at_s]
     out = io.StringIO()
     writer = csv.writer(out, lineterminator="\n")
-    writer.writerow(["order", "id", "x_mm", "y_mm", "side", "kind"])
-    xy = _own_frame(layout, sites.xy_mm)
-    writer.writerows(zip(range(1, len(sites) + 1), sites.id.tolist(), xy[:, 0].tolist(), xy[:, 1].tolist(),
-                         sites.side.tolist(), sites.kind.tolist(), strict=True))
+    writer.writerow(columns)
+    writer.writerows(zip(*columns.values(), strict=True))
     return out.getvalue()
+
+
+def _framed(study: Study, xy_mm: NDArray[np.float64], far: NDArray[np.bool_], frame: str) -> NDArray[np.float64]:
+    if frame == "panel":
+        return _own_frame(study.layout, xy_mm)
+    size = (study.layout.width_mm, study.layout.height_mm)
+    return np.round(to_machine_frame(xy_mm, study.machine, size, far), COORDINATE_DIGITS) + 0.0
 
 
 def _own_frame(layout: Layout, xy_mm: NDArray[np.float64]) -> NDArray[np.float64]:
     return np.round(np.asarray(xy_mm, float) - layout.origin_mm, COORDINATE_DIGITS) + 0.0  # + 0.0: no negative zero
 
 
-def _sites(layout: Layout, sites: Sites) -> list[dict[str, Any]]:
-    return [{"id": name, "x_mm": x, "y_mm": y, "order": order} for order, (name, (x, y)) in
-            enumerate(zip(sites.id.tolist(), _own_frame(layout, sites.xy_mm).tolist(), strict=True), 1)]
+def _sites(study: Study, sites: Sites, stop: NDArray[np.int64] | None,
+           at_s: NDArray[np.float64] | None) -> list[dict[str, Any]]:
+    listed: list[dict[str, Any]] = [{"id": name, "x_mm": x, "y_mm": y, "order": order} for order, (name, (x, y)) in
+                                    enumerate(zip(sites.id.tolist(), _own_frame(study.layout, sites.xy_mm).tolist(),
+                                                  strict=True), 1)]
+    if stop is not None:
+        listed = [site | {"stop": int(number)} for site, number in zip(listed, stop, strict=True)]
+    if study.machine_stated and at_s is not None:
+        listed = [site | {"at_s": _rounded(second)} for site, second in zip(listed, at_s, strict=True)]
+    return listed
+
+
+def _stops(plan: Plan) -> dict[str, Any]:
+    if plan.stop_xy_mm is None:
+        return {}
+    return {"n_stops": plan.units, "stops": [{"stop": number, "x_mm": x, "y_mm": y} for number, (x, y) in
+                                             enumerate(_own_frame(plan.study.layout, plan.stop_xy_mm).tolist(), 1)]}
+
+
+def _panel(study: Study, route: Route | None, **more: float | None) -> dict[str, Any]:
+    """Where the seconds of one panel go, when the study states its machine."""
+    if route is None or not study.machine_stated:
+        return {}
+    parts = {"seconds": route.seconds, "travel_s": route.travel_s, "read_s": route.read_s, "flip_s": route.flip_s,
+             "handling_s": route.handling_s, "travel_at_least_s": route.travel_at_least_s}
+    return {"panel": {name: _rounded(value) for name, value in parts.items()} | more}
+
+
+def _chance(chance: MissChance | None) -> dict[str, Any]:
+    if chance is None:
+        return {}
+    return {"miss_chance": {"at_least": chance.least, "at_most": chance.most, "simulated_panels": chance.panels}}
+
+
+def _rounded(seconds: float) -> float:
+    return round(float(seconds), SECOND_DIGITS)
 
 
 def _provenance(study: Study) -> dict[str, Any]:
@@ -101,14 +165,20 @@ def _certificate(certificate: dict[str, Any]) -> dict[str, Any]:
 
 
 def _audited(layout: Layout, audit: Audit) -> dict[str, Any]:
-    return {"terms": [{"name": term.name, "unit": term.unit, **_known("k_u", term.k_u)} for term in audit.terms],
-            "limits": [_limit(layout, limit) for limit in audit.limits],
+    biased = any(term.bias > 0 for term in audit.terms)
+    return {"terms": [{"name": term.name, "unit": term.unit, **_known("k_u", term.k_u)}
+                      | ({"bias": term.bias} if biased else {}) for term in audit.terms],
+            "limits": [_limit(layout, limit) for limit in audit.limits], **({"lost": audit.lost} if audit.lost else {}),
             "worst_position": _limit(layout, audit.worst_position)}
 
 
 def _limit(layout: Layout, limit: AuditedLimit) -> dict[str, Any]:
     written = {"label": limit.label, "max": _finite(limit.maximum), **_known("predicted", limit.predicted),
                "unit": limit.unit, "ratio": _finite(limit.ratio)}
+    if not math.isnan(limit.after_loss):
+        written |= {"after_loss": _finite(limit.after_loss)}
+    if math.isfinite(limit.floor):
+        written |= {"floor": limit.floor}
     if limit.where_mm is not None:
         written["where_mm"] = _own_frame(layout, np.array(limit.where_mm)).tolist()
     return written | ({"axis": limit.axis} if limit.axis else {})

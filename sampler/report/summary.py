@@ -7,7 +7,8 @@ from collections.abc import Callable, Sequence
 
 from sampler.errors import InputError, SamplerError
 from sampler.panel.candidates import Candidates
-from sampler.tasks.results import BOUND_TOLERANCE, Audit, AuditedLimit, Plan, SiteAudit, whole_sites
+from sampler.report.recipe import audit_lines, plan_lines
+from sampler.tasks.results import BOUND_TOLERANCE, MEETS, Audit, AuditedLimit, Plan, SiteAudit, whole_sites
 from sampler.tasks.study import Study
 from sampler.tasks.wording import against, columns, plain, share, significant
 
@@ -19,6 +20,7 @@ MOST_ADVICE = 4
 MOST_WARNINGS = 2
 MOST_REASONS = 3
 MOST_IDS = 6
+SHOWN_FLOOR = 0.5
 _LABEL = 34
 
 CAUTION = ("Predictions hold under the stated model and noise; confirm on densely measured",
@@ -37,6 +39,7 @@ def plan_summary(plan: Plan) -> str:
             tail += _advice(plan.advice, each)
         else:
             tail.append(_efficiency(plan.d_efficiency_at_least))
+            tail += [line for said in plan_lines(plan) for line in _wrapped(said, each)]
         return head, [*tail, f"Seconds: {significant(plan.seconds, 2)}.", *_warnings(plan.warnings, each)]
 
     return _screen(parts, plan.audit, "best k·u" if cannot else "k·u", plan.study)
@@ -59,6 +62,7 @@ def audit_summary(result: SiteAudit) -> str:
             name, ratio = result.best_to_add
             then = "every limit is then met" if ratio <= 1 else f"the worst limit is then at {share(ratio)} of its max"
             tail += _wrapped(f"Best site to add: {plain(name, 30)}; {then}.", each)
+        tail += [line for said in audit_lines(result) for line in _wrapped(said, each)]
         return head, [*tail, *_warnings(result.warnings, each)]
 
     return _screen(parts, audit, "k·u", result.study)
@@ -113,15 +117,18 @@ def _study(study: Study) -> str:
 
 
 def _missed(audit: Audit) -> list[AuditedLimit]:
-    return [limit for limit in audit.limits if not limit.ratio <= 1.0]
+    return [limit for limit in audit.limits if not limit.worst_ratio <= MEETS]
 
 
 def _answer(plan: Plan) -> str:
     answer = plan.answer[0].upper() + plan.answer[1:]
+    marks = "" if plan.stop_xy_mm is None else f" They read {counted(len(plan.sites), 'mark')}."
+    if not plan.counts:
+        return f"{answer}.{marks}"
     bound = f"lower bound {bound_text(plan.lower_bound)}" if math.isfinite(plan.lower_bound) else "no lower bound"
     ended = "" if plan.fewest_proven else "; search interrupted" if plan.interrupted else "; search ended before a proof"
     shown = "" if plan.audit.meets_limits else f" Shown: the best set found, {counted(len(plan.sites), 'site')}."
-    return f"{answer} ({bound}{ended}).{shown}"
+    return f"{answer} ({bound}{ended}).{shown}{marks}"
 
 
 def _cannot(plan: Plan) -> str:
@@ -152,20 +159,30 @@ def _table(audit: Audit, value: str, study: Study, rows: int) -> list[str]:
     """The limits with the highest ratios as aligned columns; `value` heads the predictions."""
     if not audit.limits:
         return ["The study sets no limits."]
-    ranked = sorted(audit.limits, key=lambda limit: -limit.ratio)
+    ranked = sorted(audit.limits, key=lambda limit: -limit.worst_ratio)
+    value = f"{value}, any {audit.lost} lost" if audit.lost else value
     cells = [(f"Limits, tightest first (k = {study.coverage_factor:g})", value, "max", "unit", "of max", "")]
     for limit in ranked[:rows]:
-        predicted, maximum = against(limit.predicted, limit.maximum)
-        cells.append((f"  {plain(limit.label, _LABEL)}", predicted, maximum, plain(limit.unit, 8), share(limit.ratio),
-                      "" if limit.ratio <= 1 else "MISSED"))
+        predicted, maximum = against(limit.worst_ratio * limit.maximum, limit.maximum)
+        cells.append((f"  {plain(limit.label, _LABEL)}", predicted, maximum, plain(limit.unit, 8),
+                      share(limit.worst_ratio), _verdict(limit)))
     wide = [max(columns(row[column]) for row in cells) for column in range(5)]
     lines = [f"{row[0]}{' ' * (wide[0] - columns(row[0]))}  {row[1]:>{wide[1]}}  {row[2]:>{wide[2]}} {row[3]:<{wide[3]}}"
              f"  {row[4]:>{wide[4]}}  {row[5]}".rstrip() for row in cells]
     hidden = ranked[rows:]
     if hidden:
-        missed = sum(not limit.ratio <= 1 for limit in hidden)
+        missed = sum(not limit.worst_ratio <= MEETS for limit in hidden)
         lines.append(f"  and {len(hidden)} more, {f'{missed} of them missed' if missed else 'all met'}")
     return lines
+
+
+def _verdict(limit: AuditedLimit) -> str:
+    """Whether the limit is missed, and its floor where it takes much of the limit: what every candidate together gives."""
+    floor = limit.floor / limit.maximum
+    if floor > MEETS:
+        return "below its floor: no number of sites will do"
+    said = "" if limit.worst_ratio <= MEETS else "MISSED"
+    return f"{said} floor {share(floor)}".lstrip() if floor > SHOWN_FLOOR else said
 
 
 def _position(audit: Audit, study: Study) -> str:

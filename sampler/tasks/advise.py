@@ -1,13 +1,25 @@
-"""What would help when the limits cannot be met."""
+"""What would help when the limits cannot be met, and what a plan rests on."""
 
 from __future__ import annotations
 
 import math
+from dataclasses import replace
 
 import numpy as np
 
-from sampler.tasks.question import Question
+from sampler.tasks.question import Question, achieved, everything, question
 from sampler.tasks.results import Audit
+from sampler.tasks.study import Study
+
+PERFECT = 1e-3
+"""Share of the reading noise that stands for a reading without any."""
+
+
+def notes(study: Study) -> tuple[str, ...]:
+    """What a reader should know of the study's assumptions, a sentence each."""
+    if max(study.noise.local_um) > 0 and not study.noise.local_range_mm:
+        return ("local_um counts as independent from mark to mark (no local_range_mm).",)
+    return ()
 
 
 def round_up(value: float, digits: int = 3) -> float:
@@ -30,11 +42,13 @@ def advise(asked: Question, audit: Audit) -> tuple[str, ...]:
     for limit in missed:
         if np.isfinite(limit.predicted):
             said.append(f"loosen {limit.label} to {round_up(limit.predicted):g} {limit.unit} (now {limit.maximum:g}; "
-                        f"{limit.predicted:.3g} with every candidate measured)")
+                        f"{limit.predicted:.3g} with every candidate measured, which no number of them beats)")
         else:
             said.append(f"{limit.label} is not determined by the candidates at all: add marks, or drop the limit")
     ratio = missed[0].ratio
-    if np.isfinite(ratio):
+    if np.isfinite(ratio) and asked.assumed.size > asked.assumed.corrected:
+        said += _beside(asked)
+    elif np.isfinite(ratio):
         mark, local = np.asarray(study.noise.mark_um), np.asarray(study.noise.local_um)
         left = (mark**2 + local**2) / ratio**2 - local**2
         if np.all(left > 0):
@@ -48,6 +62,19 @@ def advise(asked: Question, audit: Audit) -> tuple[str, ...]:
         x, y = np.subtract(places[0].where_mm, study.layout.origin_mm)
         said.append(f"marks near x = {x:.1f}, y = {y:.1f} mm, where the predicted position is worst, help most")
     return tuple(said)
+
+
+def _beside(asked: Question) -> list[str]:
+    """Where something beside the corrected terms is assumed: whether reading better could help at all."""
+    study = asked.study
+    layout, noise = study.layout, study.noise
+    quiet = replace(layout, marks=replace(layout.marks, sigma_um=layout.marks.sigma_um * PERFECT))
+    perfect = question(replace(study, layout=quiet, noise=replace(noise, mark_um=(noise.mark_um[0] * PERFECT,
+                                                                                   noise.mark_um[1] * PERFECT))))
+    if achieved(perfect, everything(perfect)).meets_limits:
+        return ["or read the marks with less noise, mark_um: perfect readings of every candidate would do"]
+    return ["even perfect readings of every candidate miss a limit: local distortion, potential terms or shared errors set its "
+            "floor, and no number of sites beats it"]
 
 
 def _pair(values: np.ndarray) -> str:
