@@ -201,7 +201,7 @@
         const angle = (step % 2 ? step : step + 0.001) * Math.PI / 8 - Math.PI / 4, c = Math.cos(angle), s = Math.sin(angle);
         const out = reach + Math.abs(c) * width / 2 + Math.abs(s) * height / 2, x = at[k][0] + c * out, y = at[k][1] + s * out;
         let cost = reach;
-        for (const beyond of [edges[0] - x + width / 2, edges[1] - y + height / 2, x + width / 2 - edges[2], y + height / 2 - edges[3]]) cost += Math.max(0, beyond);
+        for (const beyond of [edges[0] - x + width / 2, edges[1] - y + height / 2, x + width / 2 - edges[2], y + height / 2 - edges[3]]) cost += 3 * Math.max(0, beyond);
         for (const [a, b, w, h, weight] of boxes) cost += weight * Math.max(0, (w + width) / 2 - Math.abs(a - x)) * Math.max(0, (h + height) / 2 - Math.abs(b - y));
         for (const [a, b] of at) cost += 3 * Math.max(0, (12 + width) / 2 - Math.abs(a - x)) * Math.max(0, (12 + height) / 2 - Math.abs(b - y));
         if (cost < least) { least = cost; best = [x, y, reach]; }
@@ -209,7 +209,7 @@
       }
       boxes.push([best[0], best[1], width, height, 8]);
       const [dx, dy] = [best[0] - at[k][0], best[1] - at[k][1]], leader = [];
-      if (best[2] > 11) leader.push(element("line", { x1: 0, y1: 0, x2: dx * 0.75, y2: dy * 0.75 }));
+      if (best[2] > 6) leader.push(element("line", { x1: 0, y1: 0, x2: dx * 0.75, y2: dy * 0.75 }));
       group.append(pinned([marks.x[state.rows[k]], marks.y[state.rows[k]]], ...leader,
         element("text", { x: dx, y: dy + 4, "text-anchor": "middle" }, String(k + 1))));
     }

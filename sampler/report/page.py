@@ -32,7 +32,7 @@ Array = NDArray[np.float64]
 MOST_CELLS = 2500
 CHART_SIZE = (380, 190)
 CHART_MARGIN = (18, 14, 34, 46)
-MAP_MARGIN = 0.03
+MAP_MARGIN = 0.04
 AXIS_MARGIN = 0.07
 
 _ENVIRONMENT = Environment(loader=PackageLoader("sampler.report", ""), autoescape=True, undefined=StrictUndefined,

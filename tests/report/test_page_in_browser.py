@@ -9,6 +9,7 @@ import numpy as np
 import pytest
 from chromium import Browser, chromium
 from pages import CLAIMS, ODD, big_page, cannot_page, full_page, page_of, small_study
+from scipy.interpolate import RegularGridInterpolator
 
 from sampler.report.page import page_html
 from sampler.tasks.wording import significant
@@ -205,7 +206,7 @@ def test_zoom_and_pan(opened):
     page.key("0")
     page.click("#fit")
     assert page.value(VIEW) == pytest.approx(home, abs=1e-3)
-    page.mouse("mouseWheel", x, y, deltaX=0, deltaY=100)
+    page.mouse("mouseWheel", x, y, deltaX=0, deltaY=-100)
     assert page.value(VIEW) == pytest.approx(home, abs=1e-3), "the wheel alone scrolls the page"
 
 
@@ -243,7 +244,20 @@ def test_the_map_switches(opened):
 def test_a_limit_within_the_map_is_a_heavy_line_with_its_name(opened):
     page = opened("cannot")
     assert page.text("#limit-names") == "limit 0.1 µm" and "limit 0.1 µm: heavy line" in page.text("#scale-name")
-    assert len(page.value("document.querySelector('#shade .limit').getAttribute('d')")) > 100
+    line = page.value("document.querySelector('#shade .limit').getAttribute('d')")
+    at = np.array([[float(part) for part in point.split()] for point in re.findall(r"[ML]([^ML]*)", line)]) * [1, -1]
+    position = cannot_page().plan.audit.position
+    known = RegularGridInterpolator((position.y_mm, position.x_mm), position.k_u_um.max(axis=2))
+    assert len(at) > 50
+    np.testing.assert_allclose(known(at[:, ::-1]), 0.1, atol=2e-4)
+
+
+def test_the_shading_reaches_the_outline(opened):
+    """The raster knows nothing within the edge exclusion; there it is carried on, for the outline to cut."""
+    page = opened("full")
+    box = page.value("(() => { const b = document.querySelector('#shade path').getBBox();"
+                     " return [b.x, b.y, b.width, b.height]; })()")
+    np.testing.assert_allclose(box, [-255, -257.5, 510, 515], atol=0.01)
 
 
 def test_everything_has_a_name_for_a_screen_reader(opened):

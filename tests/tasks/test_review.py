@@ -56,6 +56,9 @@ def test_no_loss_helps(rng):
     visits = _visits(rng.choice(asked.n, 15, replace=False), None)
     audit = achieved(asked, visits)
     assert (losses(asked, visits, audit).ratio >= audit.worst.ratio).all()
+    # The audit knows the worst place between raster points, which the losses do not look at.
+    between = replace(audit, limits=tuple(replace(limit, predicted=10 * limit.predicted) for limit in audit.limits))
+    assert (losses(asked, visits, between).ratio >= between.worst.ratio).all()
 
 
 def test_the_only_reading_of_a_term_is_no_longer_determined_when_lost():
