@@ -16,6 +16,7 @@ COMMANDS = {
     "audit": "what sites that you chose achieve, and how far they are from the fewest",
     "start": "a layout and a study, ready to run, from a bare table of marks",
     "bring": "the same from a DXF, GDSII, OASIS, Gerber or Excellon file",
+    "characterise": "model, noise, variation and read rates from densely measured pilot panels",
     "completion": "the script that completes commands and options in your shell",
     "budget": "from pad and via to the position limit, and from a plan to the pad it supports",
 }
