@@ -265,7 +265,8 @@ def _draw_sites(axes: Axes, scene: _Scene, origin: Array, points_per_mm: float) 
     if scene.route and len(stands) > 1:
         legend += _draw_route(axes, stands, stand_side)
     if n and scene.numbered:
-        size = float(np.clip(5.6 * np.sqrt(MOST_NUMBERS / max(n, MOST_NUMBERS)), 2.6, 5.6))
+        largest = 5.6 if scene.stop is None else 3.2  # marks of one stop lie close together
+        size = float(np.clip(5.6 * np.sqrt(MOST_NUMBERS / max(n, MOST_NUMBERS)), 2.6, largest))
         filled: dict[str, Any] = {"linestyle": "none", "markersize": size, "markerfacecolor": style.INK,
                                   "markeredgecolor": style.PAPER, "markeredgewidth": 0.7}
         hollow = filled | {"markerfacecolor": style.PAPER, "markeredgecolor": style.INK, "markeredgewidth": 1.3}
@@ -279,7 +280,8 @@ def _draw_sites(axes: Axes, scene: _Scene, origin: Array, points_per_mm: float) 
                 (~required & ~back, "o", filled, f"{_count(int((~back).sum()) if back.any() else n, 'site')}"
                  f"{' on the front' if back.any() else fields + note}"),
                 (~required & back, "D", hollow, f"{_count(int(back.sum()), 'site')} on the back"),
-                (required, "s", filled, "required site")):
+                (required & ~back, "s", filled, "required site"),
+                (required & back, "s", hollow, "required site on the back")):
             rows = drawn[shown[drawn]]
             if len(rows):
                 axes.plot(*xy[rows].T, marker=marker, zorder=6, scalex=False, scaley=False, **look)
@@ -317,7 +319,7 @@ def _draw_fields(axes: Axes, stands: Array, scene: _Scene) -> list[Artist]:
         return []
     corners = np.array([[-1, -1], [1, -1], [1, 1], [-1, 1]]) * np.asarray(field) / 2
     axes.add_collection(PolyCollection(list(stands[:, None] + corners), facecolors="none", edgecolors=style.INK,
-                                       linewidths=0.7, zorder=5.9), autolim=False)
+                                       linewidths=0.7, zorder=6.05), autolim=False)
     return [Patch(facecolor="none", edgecolor=style.INK, linewidth=0.7,
                   label=f"field of view, {field[0]:g} × {field[1]:g} mm")]
 

@@ -52,8 +52,9 @@ class Determinant:
 
     def slope(self, inverse: Array, sites: slice | Indices) -> Array:
         """d/dw of the term for the weight of each site: weight · tr(Bᵢ M⁻¹ Bᵢᵀ), (n,)."""
-        flat = self.rows[sites].reshape(-1, self.rows.shape[2])
-        return self.weight * np.einsum("ij,ij->i", flat @ inverse, flat).reshape(-1, max(1, self.rows.shape[1])).sum(axis=1)
+        rows = self.rows[sites]
+        flat = rows.reshape(-1, rows.shape[2])
+        return self.weight * np.einsum("ij,ij->i", flat @ inverse, flat).reshape(rows.shape[:2]).sum(axis=1)
 
 
 def determinants(split: Split, problem: SiteProblem, index: Indices | None = None) -> list[Determinant]:

@@ -97,7 +97,7 @@ class _At:
             cross = (flat @ inverse) @ flat.T
             squared = term.weight * cross
             if number < len(self.readings):
-                reading = self.readings[number].reshape(n * m, -1)
+                reading = self.readings[number].reshape(n * m, self.readings[number].shape[-1])
                 squared += 2.0 * ((reading * limit_duals[self.owners[number]]) @ reading.T)
             squared *= cross
             total += squared if m == 1 else squared.reshape(n, m, n, m).sum(axis=(1, 3))
