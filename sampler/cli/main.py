@@ -14,9 +14,11 @@ COMMANDS = {
     "plan": "the fewest sites that meet a study's limits, with proof, map and site list",
     "certify": "proves a plan again, from its study, layout and certificate alone",
     "audit": "what sites that you chose achieve, and how far they are from the fewest",
+    "report": "one HTML page of a plan, for the review and for the line",
     "start": "a layout and a study, ready to run, from a bare table of marks",
     "bring": "the same from a DXF, GDSII, OASIS, Gerber or Excellon file",
     "characterise": "model, noise, variation and read rates from densely measured pilot panels",
+    "fit": "corrections of measured panels, whether each meets its limits, and whether the plan still holds",
     "completion": "the script that completes commands and options in your shell",
     "budget": "from pad and via to the position limit, and from a plan to the pad it supports",
 }
