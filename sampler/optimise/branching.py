@@ -131,7 +131,11 @@ class Splits:
         part = np.minimum(w, 1 - w)
         if part.max(initial=0.0) <= 1e-6:
             return None
-        site = sites[int(np.argmax(part))]
         mask = np.zeros(len(self.order), bool)
-        mask[site] = True
-        return HalfSpace(NAMED, np.zeros(self.problem.p), 0.0, 0, mask, (self.problem.key[self.order[site]].item(),))
+        mask[sites[int(np.argmax(part))]] = True
+        return self.named(mask)
+
+    def named(self, mask: NDArray[np.bool_]) -> HalfSpace:
+        """The sites of a mask by their names."""
+        keys = tuple(self.problem.key[self.order[mask]].tolist())
+        return HalfSpace(NAMED, np.zeros(self.problem.p), 0.0, 0, mask, keys)

@@ -9,6 +9,9 @@ every set that meets limit k, and multipliers. Nothing in a certificate depends 
               Bᵢ[axis]·vector, or ‖Bᵢ·vector‖² where axis is −1, or membership in `keys` where axis is −2
     steps     preorder: kind (T,) 0 split, 1 fix, 2 leaf; split (T,), at_most (T,): first child ≤, second child ≥ +1;
               budget (T,) μ₀; y, counts and rules as sparse rows: start (T+1,), index, value
+    cliques   half-spaces of which any set holds at most one site, because of the spacing
+    losses    when sites may be lost: for some rows (`row`) the lost sites (`keys`), and half-spaces known to hold a chosen
+              site (`half`) with θ (`theta`): the row is without its lost sites, and without the best of each such half-space
 """
 
 from __future__ import annotations
@@ -55,7 +58,7 @@ def _pairs(pairs: tuple[tuple[int, float], ...]) -> tuple[Indices, Array]:
 
 
 def tree_certificate(split: Split, problem: SiteProblem, count: float, pool: list[Row], halves: list[HalfSpace],
-                     steps: list[Step]) -> dict[str, Any]:
+                     steps: list[Step], order: Indices, cliques: list[int]) -> dict[str, Any]:
     """The proof that no set of cost ≤ count meets limits and rules."""
     nothing = Multipliers(np.zeros(0, np.int64), np.zeros(0), 0.0, (), ())
     used = np.unique(np.concatenate([np.zeros(0, np.int64), *(step.multipliers.rows for step in steps
@@ -63,8 +66,19 @@ def tree_certificate(split: Split, problem: SiteProblem, count: float, pool: lis
     place = np.zeros(len(pool), np.int64)
     place[used] = np.arange(len(used))
     all_multipliers = [step.multipliers or nothing for step in steps]
+    losses = [(int(place[row]), pool[row].loss) for row in used]
+    splits = np.unique([step.split for step in steps if step.split >= 0]
+                       + [split for part in all_multipliers for split, _ in part.counts]
+                       + [split for _, loss in losses if loss is not None for split, _ in loss.within]).astype(np.int64)
+    number = np.full(len(halves) + 1, -1)
+    number[splits] = np.arange(len(splits))
+    halves = [halves[split] for split in splits]
     return {
-        "format": FORMAT, "kind": "tree", "excludes": float(count), "candidates": problem.n,
+        "format": FORMAT, "kind": "tree", "cliques": [int(number[split]) for split in cliques if number[split] >= 0],
+        "losses": [{"row": row, "keys": problem.key[order[loss.sites]].tolist(),
+                    "half": [int(number[split]) for split, _ in loss.within], "theta": [theta for _, theta in loss.within]}
+                   for row, loss in losses if loss is not None],
+        "excludes": float(count), "candidates": problem.n,
         "rows": {"limit": split.limit_index[[pool[row].limit for row in used]] if len(used) else np.zeros(0, np.int64),
                  "z": np.array([lifted(split, pool[row]) for row in used]).reshape(-1, problem.p)},
         "halves": {"axis": np.array([half.axis for half in halves], np.int64),
@@ -72,11 +86,12 @@ def tree_certificate(split: Split, problem: SiteProblem, count: float, pool: lis
                    "threshold": np.array([half.threshold for half in halves], float),
                    "keys": [list(half.keys) for half in halves]},
         "steps": {"kind": np.array([STEP_KINDS.index(step.kind) for step in steps], np.int64),
-                  "split": np.array([step.split for step in steps], np.int64),
+                  "split": number[np.array([step.split for step in steps], np.int64)],
                   "at_most": np.array([step.at_most for step in steps], np.int64),
                   "budget": np.array([multipliers.budget for multipliers in all_multipliers], float),
                   "y": _sparse([(place[multipliers.rows], multipliers.y) for multipliers in all_multipliers]),
-                  "counts": _sparse([_pairs(multipliers.counts) for multipliers in all_multipliers]),
+                  "counts": _sparse([_pairs(tuple((int(number[split]), mu) for split, mu in multipliers.counts))
+                                     for multipliers in all_multipliers]),
                   "rules": _sparse([_pairs(multipliers.rules) for multipliers in all_multipliers])},
     }
 

@@ -24,12 +24,21 @@ def pack(matrix: Array) -> Array:
 
 
 @dataclass(frozen=True, slots=True)
+class Loss:
+    """What a row has to do without: the coefficients of the lost `sites` are zero. For each (count set T, θ) of `within`,
+    known to hold a chosen site, coefficients inside T are at least θ, and the row demands θ more (see `lost.py`)."""
+
+    sites: Indices
+    within: tuple[tuple[int, float], ...] = ()
+
+
+@dataclass(frozen=True, slots=True)
 class Row:
     """A covering row: limit l at a point. `z[b]` (q_b, k), one for each of the limit's columns in block b, turned back into
-    the problem's own terms by the block's lifts `lift[b]` (k,).
+    the problem's own terms by the block's lifts `lift[b]` (k,). `loss`: sites that it does without.
 
     `packed`: the sums Σ_k z_kz_kᵀ of all blocks, packed, so that site i's coefficient is its packed BᵢᵀBᵢ times it.
-    `prior` = Σ zᵀP₀z. For every w that meets the limit: Σ wᵢaᵢ + prior ≥ 1.
+    `prior` = Σ zᵀP₀z − Σθ. For every w that meets the limit: Σ wᵢaᵢ + prior ≥ 1.
     """
 
     limit: int
@@ -37,13 +46,15 @@ class Row:
     lift: tuple[Indices, ...]
     packed: Array
     prior: float
+    loss: Loss | None = None
 
 
-def cover(split: Split, limit: int, z: list[Array], lift: list[Indices]) -> Row:
+def cover(split: Split, limit: int, z: list[Array], lift: list[Indices], loss: Loss | None = None) -> Row:
     """The covering row of a limit from its parts in each block."""
     squares = [part @ part.T for part in z]
     prior = sum(float((square * block.prior).sum()) for square, block in zip(squares, split.blocks, strict=True))
-    return Row(limit, tuple(z), tuple(lift), np.concatenate([pack(square) for square in squares]), prior)
+    return Row(limit, tuple(z), tuple(lift), np.concatenate([pack(square) for square in squares]),
+               prior if loss is None else prior - sum(theta for _, theta in loss.within), loss)
 
 
 class Gram:

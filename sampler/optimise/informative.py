@@ -7,12 +7,12 @@ on the candidates that the continuous optimum hardly misses, and they end when t
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 
 import numpy as np
 
 from sampler.optimise.blocks import Array, Split
-from sampler.optimise.determinant import best_swaps, determinants, swap_gains, value
+from sampler.optimise.determinant import Determinant, best_swaps, determinants, offset, swap_gains, value
 from sampler.optimise.exchange import FEASIBLE, LAST_RIDGE, Clock, Exchange, Stop
 from sampler.optimise.log_det import log_det_bound
 from sampler.optimise.lost import ratios_after_loss
@@ -23,12 +23,16 @@ SMALL_GAIN = 1e-9
 """Gains of log det below this are rounding."""
 POOL_PER_SITE = 25
 LEAST_POOL, MOST_POOL = 200, 3000
+SAME_POOL = 8
+"""Starts in one pool before it is drawn anew."""
+POLISHED_ALWAYS = 20_000
+"""Up to so many candidates every start ends with a climb among all of them; of more, a start that is the best so far."""
 UNIFORM = 0.5
 """Share of the starts that draw sites evenly; the others draw by the weights of the continuous optimum."""
 PATIENCE = 6
 """Kicks without gain before a new start."""
-RETURNS = 5
-"""The search ends when this many starts have come to the best value."""
+RETURNS, RETURNS_PER_GAP = 5, 40
+"""The search ends when so many starts have come to the best value; more where the bound leaves room above it."""
 STARTS = 400
 
 
@@ -159,56 +163,76 @@ def d_optimal(split: Split, problem: SiteProblem, budget: float, *, rng: np.rand
 def _best_set(split: Split, problem: SiteProblem, budget: float, limited: bool, chosen: Indices,
               rng: np.random.Generator, clock: Clock, starts: int) -> Indices:
     peak = log_det_bound(split, problem, budget, limited=limited, deadline=clock.deadline)
-    climb = _climb(split, problem, budget, limited, chosen, peak.weights, peak.gains, rng, clock)
-    source = climb.exchange.pool
-    best = _Best(np.zeros(0, np.int64), -np.inf)
+    bound = peak.value - offset(split, problem) if np.isfinite(peak.value) else np.inf
+    pools = _Pools(split, problem, budget, limited, peak.weights, rng, clock)
+    best = _Best(chosen, value(pools.terms, chosen) if len(chosen) else -np.inf)
     if len(chosen):
-        choice = Choice(source, source.places(chosen))
-        best = _Best(chosen, climb.value(choice))
-        climb.rise(choice)
-        best.offer(np.sort(source.index[choice.sites]), climb.value(choice))
-    for _ in range(starts):
-        if clock.over() or best.returns >= RETURNS:
+        best.offer(*pools.polished(chosen, best.value))
+    for number in range(starts):
+        if clock.over() or best.returns >= RETURNS + RETURNS_PER_GAP * min(1.0, max(0.0, bound - best.value)):
             break
-        start = climb.start(bool(rng.uniform() < UNIFORM))
-        if start is None and len(best.sites):
-            start = Choice(source, source.places(best.sites))
-        if start is not None:
-            choice = climb.wander(start)
-            best.offer(np.sort(source.index[choice.sites]), climb.value(choice))
-    return _finish(split, problem, budget, limited, best.sites, peak.weights, rng, clock) if len(best.sites) else best.sites
+        if number % SAME_POOL == 0:
+            climb = pools.climb(peak.gains, best.sites)
+        choice = climb.start(bool(rng.uniform() < UNIFORM))
+        if choice is None and len(best.sites):
+            choice = Choice(climb.exchange.pool, climb.exchange.pool.places(best.sites))
+        if choice is None:
+            continue
+        choice = climb.wander(choice)
+        found, reached = np.sort(climb.exchange.pool.index[choice.sites]), climb.value(choice)
+        if problem.n <= POLISHED_ALWAYS or reached > best.value + SMALL_GAIN:
+            found, reached = pools.polished(found, reached)
+        best.offer(found, reached)
+    return best.sites
 
 
-def _finish(split: Split, problem: SiteProblem, budget: float, limited: bool, chosen: Indices, weights: Array,
-            rng: np.random.Generator, clock: Clock) -> Indices:
-    """The climb's last steps with all candidates: in a pool of those that are best to swap in."""
-    terms = determinants(split, problem)
-    while not clock.over():
-        ridge = LAST_RIDGE * len(chosen) / problem.n
-        gains = best_swaps(terms, [term.inverse(chosen, ridge) for term in terms], chosen)
-        climb = _climb(split, problem, budget, limited, chosen, weights, gains, rng, clock)
-        source = climb.exchange.pool
-        choice = Choice(source, source.places(chosen))
-        before = climb.value(choice)
-        climb.rise(choice)
-        if climb.value(choice) <= before + SMALL_GAIN:
-            break
-        chosen = np.sort(source.index[choice.sites])
-    return chosen
+@dataclass(slots=True)
+class _Pools:
+    """Climbs in pools of a problem's candidates."""
 
+    split: Split
+    problem: SiteProblem
+    budget: float
+    limited: bool
+    weights: Array
+    rng: np.random.Generator
+    clock: Clock
+    terms: list[Determinant] = field(init=False)
+    rank: Indices = field(init=False)
 
-def _climb(split: Split, problem: SiteProblem, budget: float, limited: bool, chosen: Indices, weights: Array, gains: Array,
-           rng: np.random.Generator, clock: Clock) -> Climb:
-    """A climb in a pool of the candidates of greatest gain, and of the chosen."""
-    size = int(np.clip(POOL_PER_SITE * budget / problem.cost.mean(), LEAST_POOL, MOST_POOL))
-    allowed = np.flatnonzero(~problem.forbidden)
-    keep = allowed[_greatest(gains[allowed], key_rank(problem)[allowed], size)]
-    for members, low in zip(problem.rules.members, problem.rules.lower, strict=True):
-        if low > 0:
-            keep = np.append(keep, members[_greatest(gains[members], key_rank(problem)[members], size // 4)])
-    source = pool(split, problem, np.append(keep, chosen))
-    likely = np.maximum(weights[source.index], 0.0) + 0.05 * budget / max(len(source.index), 1)
-    return Climb(Exchange(split, source, budget, likely, rng, clock), problem, limited)
+    def __post_init__(self) -> None:
+        self.terms = determinants(self.split, self.problem)
+        self.rank = key_rank(self.problem)
+
+    def polished(self, chosen: Indices, reached: float) -> tuple[Indices, float]:
+        """The set after the climb's last steps with all candidates: in pools of those that are best to swap in."""
+        while not self.clock.over():
+            ridge = LAST_RIDGE * len(chosen) / self.problem.n
+            inverses = [term.inverse(chosen, ridge) for term in self.terms]
+            climb = self.climb(best_swaps(self.terms, inverses, chosen), chosen, spread=False)
+            choice = Choice(climb.exchange.pool, climb.exchange.pool.places(chosen))
+            climb.rise(choice)
+            after = climb.value(choice)
+            if after <= reached + SMALL_GAIN:
+                break
+            chosen, reached = np.sort(climb.exchange.pool.index[choice.sites]), after
+        return chosen, reached
+
+    def climb(self, gains: Array, chosen: Indices, spread: bool = True) -> Climb:
+        """A climb in a pool of the candidates of greatest gain, of as many others if `spread`, and of the chosen."""
+        problem = self.problem
+        size = int(np.clip(POOL_PER_SITE * self.budget / problem.cost.mean(), LEAST_POOL, MOST_POOL))
+        allowed = np.flatnonzero(~problem.forbidden)
+        keep = [chosen, allowed[_greatest(gains[allowed], self.rank[allowed], size)]]
+        for members, low in zip(problem.rules.members, problem.rules.lower, strict=True):
+            if low > 0:
+                keep.append(members[_greatest(gains[members], self.rank[members], size // 4)])
+        if spread and len(allowed) > size:
+            order = allowed[np.argsort(self.rank[allowed], kind="stable")]
+            keep.append(self.rng.choice(order, min(size, len(order)), replace=False))
+        source = pool(self.split, problem, np.concatenate(keep))
+        likely = np.maximum(self.weights[source.index], 0.0) + 0.05 * self.budget / max(source.n, 1)
+        return Climb(Exchange(self.split, source, self.budget, likely, self.rng, self.clock), problem, self.limited)
 
 
 def _greatest(gains: Array, rank: Indices, size: int) -> Indices:

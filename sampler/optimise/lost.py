@@ -42,56 +42,54 @@ def ratios_after_loss(split: Split, chosen: Indices, lost: int) -> Array:
     before = split.ratios(chosen)
     if not np.isfinite(before).all():
         worst = np.full(split.limits, -np.inf)
-        for gone in _sets(len(chosen), lost):
-            worst = np.maximum(worst, _left(split, chosen, gone))
+        for gone in sets_of(len(chosen), lost):
+            worst = np.maximum(worst, split.ratios(np.delete(chosen, gone)))
         return worst
-    loss = _Losses(split, chosen)
+    loss = Losses(split, [block.rows[chosen] for block in split.blocks])
     few = lost == 1 or len(chosen) <= ALL_PAIRS_OF
-    sets = _sets(len(chosen), lost) if few else loss.dangerous(before)
-    return loss.worst(before, sets)
+    sets = sets_of(len(chosen), lost) if few else loss.dangerous(before)
+    worst, unsure = loss.worst(before, sets)
+    for gone in unsure:
+        worst = np.maximum(worst, split.ratios(np.delete(chosen, gone)))
+    return worst
 
 
-def _sets(n: int, r: int) -> Indices:
+def sets_of(n: int, r: int) -> Indices:
     """All r-subsets of n positions, (sets, r)."""
     return np.array(list(combinations(range(n), r)), np.int64).reshape(-1, r)
 
 
-def _left(split: Split, chosen: Indices, gone: Indices) -> Array:
-    return split.ratios(np.delete(chosen, gone))
+class Losses:
+    """What each site tells at M = P₀ + Σ BᵢᵀBᵢ: B M^(−1/2) and B M⁻¹C of each block. `rows[b]` (n, m, q) are the sites',
+    scaled by √w where weights are meant."""
 
-
-class _Losses:
-    """What each chosen site tells: B M⁻¹C and B M⁻¹ of each block, for M of all chosen sites."""
-
-    def __init__(self, split: Split, chosen: Indices) -> None:
-        self.split, self.chosen = split, chosen
-        self.told, self.seen, self.rows = [], [], []
-        for block in split.blocks:
-            rows = block.rows[chosen]
-            flat = rows.reshape(-1, block.q)
+    def __init__(self, split: Split, rows: list[Array]) -> None:
+        self.split, self.n = split, len(rows[0])
+        self.told, self.seen = [], []
+        for block, part in zip(split.blocks, rows, strict=True):
+            flat = part.reshape(-1, block.q)
             information = block.prior + flat.T @ flat
             values, vectors = np.linalg.eigh(information)
             known = values > values[-1] * RANK_TOLERANCE  # directions that no limit asks for may be unknown
             root = vectors[:, known] / np.sqrt(values[known])
-            self.rows.append(rows)
-            self.seen.append(rows @ root)
+            self.seen.append(part @ root)
             self.told.append(self.seen[-1] @ (root.T @ block.columns))
 
-    def worst(self, before: Array, sets: Indices) -> Array:
-        """The worst ratio of each limit over the lost sets (sets, r), (limits,)."""
-        worst = np.full(len(before), -np.inf)
+    def worst(self, before: Array, sets: Indices) -> tuple[Array, Indices]:
+        """The worst ratio of each limit over the lost sets (sets, r), (limits,), but for the sets that leave next to nothing
+        of some direction, which are returned."""
+        worst, doubtful = np.full(len(before), -np.inf), [sets[:0]]
         width = max(1, max((seen.shape[1] * columns.shape[2] for seen, columns in zip(self.seen, self.told, strict=True)),
                            default=1)) * sets.shape[1] + len(before)
         step = max(1, CHUNK_NUMBERS // width)
         for start in range(0, len(sets), step):
             part = sets[start:start + step]
-            ratios, unsure = self._ratios(before, part)
-            for position in np.flatnonzero(unsure):
-                ratios[position] = _left(self.split, self.chosen, part[position])
-            worst = np.maximum(worst, ratios.max(axis=0, initial=-np.inf))
-        return worst
+            ratios, unsure = self.ratios(before, part)
+            doubtful.append(part[unsure])
+            worst = np.maximum(worst, ratios[~unsure].max(axis=0, initial=-np.inf))
+        return worst, np.concatenate(doubtful)
 
-    def _ratios(self, before: Array, sets: Indices) -> tuple[Array, np.ndarray]:
+    def ratios(self, before: Array, sets: Indices) -> tuple[Array, np.ndarray]:
         """Ratios after each loss, (sets, limits), and which sets leave next to nothing of some direction, (sets,)."""
         total = np.repeat(before[None], len(sets), axis=0)
         unsure = np.zeros(len(sets), bool)
@@ -114,7 +112,7 @@ class _Losses:
         paired with all; of the others, one takes part only if its bound with the best partner reaches what some pair is
         known to do.
         """
-        n = len(self.chosen)
+        n = self.n
         trace = np.zeros(n)
         told = np.zeros((n, len(before)))
         for block, seen, each in zip(self.split.blocks, self.seen, self.told, strict=True):
@@ -124,7 +122,7 @@ class _Losses:
         large = np.flatnonzero(trace > LARGE_TRACE)
         pairs = np.stack(np.meshgrid(large, np.arange(n)), axis=-1).reshape(-1, 2)
         sets = np.concatenate([two, pairs[pairs[:, 0] != pairs[:, 1]]])
-        known = self.worst(before, np.unique(two, axis=0)) - before
+        known = self.worst(before, np.unique(two, axis=0))[0] - before
         bound = (told + told.max(axis=0)) / (1.0 - min(2.0 * LARGE_TRACE, 2.0 * trace.max()))
         able = np.flatnonzero((bound >= known * (1.0 - 1e-9)).any(axis=1) & (trace <= LARGE_TRACE))
-        return np.concatenate([sets, able[_sets(len(able), 2)]])
+        return np.concatenate([sets, able[sets_of(len(able), 2)]])

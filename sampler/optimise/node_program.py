@@ -95,6 +95,14 @@ class NodeProgram:
         self.count_row.append(self.rows)
         self.rows += 1
 
+    def use_cover(self, index: int, prior: float, use: bool) -> None:
+        """Lets a covering row count, or not."""
+        self.solver.changeRowBounds(self.cover_row[index], -prior if use else -np.inf, np.inf)
+
+    def cover_slack(self, priors: list[float]) -> Array:
+        """By how much each covering row exceeds t at the last optimum."""
+        return np.array(self.solver.getSolution().row_value)[self.cover_row] + np.array(priors)
+
     def set_bounds(self, lower: NDArray, upper: NDArray) -> None:
         """Bounds of the program's sites, (sites,)."""
         at = np.array(self.site_column, np.int32)

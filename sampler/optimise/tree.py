@@ -24,9 +24,12 @@ from sampler.optimise.blocks import Split
 from sampler.optimise.branching import CAPS, HalfSpace, Splits
 from sampler.optimise.certificate import counting_certificate, tree_certificate
 from sampler.optimise.gram import Gram, Row, cover
+from sampler.optimise.loss_rows import Weighed, lost_rows, within_rows
+from sampler.optimise.lost import ratios_after_loss
 from sampler.optimise.node_program import CLOSED_T, NodeProgram, Solution
 from sampler.optimise.problem import SiteProblem
 from sampler.optimise.rows import RowPool
+from sampler.optimise.spacing import Discs, spaced
 from sampler.optimise.steps import Multipliers, Step
 
 Array = NDArray[np.float64]
@@ -43,6 +46,17 @@ FIRST_COLUMNS = 100
 MOST_ROUNDS = 200
 """Rows or columns are added at most so often in one node before it is branched on as it stands."""
 LEAST_LOSS = 1e-4
+LOST_ROWS = 8
+NEW_CLIQUES = 12
+"""Rows added at a time for losses, and for spacing."""
+LOST_PROGRAM_ROWS, NEARLY_BINDS = 300, 0.03
+"""With losses the program grows beyond the first, and is then rebuilt from the rows with less slack than the second."""
+MOST_CLUSTERS, CLUSTER_TRIES, CLUSTER_WEIGHT, CLUSTER_SHARE, CLUSTER_REACH, LEAST_GAP = 14, 30, 1.0, 0.25, 0.7, 1.3
+"""So many clusters that surely hold a site are sought, among the balls around so many sites: of at least CLUSTER_WEIGHT and at
+most CLUSTER_SHARE of the sites. A ball reaches CLUSTER_REACH of the way to the next site of weight, which is LEAST_GAP times
+as far as the last one inside."""
+RECENT = 8
+"""Discs stay in the program for so many nodes after they last mattered."""
 PROGRAM_ROWS = 100
 PROGRAM_COLUMNS = 250
 """The program is rebuilt with what was used lately when it holds more than this."""
@@ -69,6 +83,7 @@ class _Node:
     path: tuple[tuple[int, bool, int], ...]  # (split, at most?, count)
     sites: Indices
     w: Array  # the parent's weights, on `sites`
+    anchors: tuple[HalfSpace, ...] = ()  # clusters to branch on before anything else
 
 
 class Tree:
@@ -93,6 +108,12 @@ class Tree:
             self.rules.append((mask, float(low), float(high)))
         if problem.max_sites is not None:
             self.rules.append((np.ones(self.n, bool), -np.inf, float(problem.max_sites)))
+        self.lost = problem.lost
+        self.discs = Discs(problem.xy[self.order], problem.spacing) if problem.xy is not None and problem.spacing > 0 else None
+        self.cliques: list[int] = []       # splits of which any set holds at most one site
+        self.clique_used: dict[int, int] = {}
+        self.most_held = LOST_PROGRAM_ROWS
+        self.anchors: list[int] = []       # splits of clusters, see `_anchor`
         self.pool: list[Row] = []
         self.proof: list[Step] = []
         self.halves: list[HalfSpace] = []
@@ -128,13 +149,14 @@ class Tree:
         for split in splits:
             self.program.add_count(self.masks[split][sites])
         for row in rows:
-            self.program.add_cover(self.gram.coefficients(self.pool[row].packed, sites), self.pool[row].prior)
+            self.program.add_cover(self._coefficients([self.pool[row]], sites)[:, 0], self.pool[row].prior)
         self.row_used = [self.nodes] * len(rows)
         self.site_used = np.full(len(sites), self.nodes)
 
     def _purge(self, path: tuple[tuple[int, bool, int], ...]) -> None:
         """Rebuild the program from what recent nodes used."""
         on_path = [split for split, _, _ in path]
+        on_path += [split for split, when in self.clique_used.items() if when >= self.nodes - RECENT and split not in on_path]
         program = self.program
         if not (len(self.held) > PROGRAM_ROWS or len(program.sites) > PROGRAM_COLUMNS
                 or len(self.counted) > len(on_path) + 30):
@@ -147,20 +169,52 @@ class Tree:
         sites = np.array(program.sites)[self.site_used >= site_from]
         self._build(sites, rows[-PROGRAM_ROWS // 2:], on_path)
 
+    def _shed(self, node: _Node) -> None:
+        """Losses give very many rows: rebuild the program from those that are near to binding."""
+        slack = self.program.cover_slack([self.pool[row].prior for row in self.held])
+        kept = [row for row, spare in zip(self.held, slack, strict=True) if spare < NEARLY_BINDS]
+        self.most_held = max(LOST_PROGRAM_ROWS, 2 * len(kept))
+        self._build(np.array(self.program.sites), kept, self.counted)
+        self._enter(node)
+
     def _add_row(self, row: Row) -> None:
         sites = np.array(self.program.sites)
-        self.program.add_cover(self.gram.coefficients(row.packed, sites), row.prior)
+        self.program.add_cover(self._coefficients([row], sites)[:, 0], row.prior)
         self.held.append(len(self.pool))
         self.row_used.append(self.nodes)
         self.pool.append(row)
 
     def _add_sites(self, sites: Indices) -> None:
-        coefficients = self.gram.coefficients(np.stack([self.pool[row].packed for row in self.held], axis=1), sites) \
-            if self.held else np.zeros((len(sites), 0))
+        coefficients = self._coefficients([self.pool[row] for row in self.held], sites)
         masks = [mask for mask, _, _ in self.rules] + [self.masks[split] for split in self.counted]
         counts = np.stack([mask[sites] for mask in masks]).astype(float) if masks else np.zeros((0, len(sites)))
         self.program.add_sites(sites, self.cost[sites], coefficients.T, counts)
         self.site_used = np.concatenate([self.site_used, np.full(len(sites), self.nodes)])
+
+    def _coefficients(self, rows: list[Row], sites: Indices) -> Array:
+        """Coefficients of the sites in the rows, (sites, rows)."""
+        if not rows:
+            return np.zeros((len(sites), 0))
+        found = self.gram.coefficients(np.stack([row.packed for row in rows], axis=1), sites)
+        for column, row in enumerate(rows):
+            if row.loss is not None:
+                found[np.isin(sites, row.loss.sites), column] = 0.0
+                for split, theta in row.loss.within:
+                    held = self.masks[split][sites]
+                    found[held, column] = np.maximum(found[held, column], theta)
+        return found
+
+    def _without_loss(self, row: Row) -> tuple[Indices, Array]:
+        """The sites at which a row's coefficients are not those of its z, and by how much they are more."""
+        lost, within = ((), ()) if row.loss is None else (row.loss.sites, row.loss.within)
+        sites = np.unique(np.concatenate([np.asarray(lost, np.int64),
+                                          *(np.flatnonzero(self.masks[split]) for split, _ in within)]))
+        return sites, self._coefficients([row], sites)[:, 0] - self.gram.coefficients(row.packed, sites)
+
+    def _usable(self, row: Row, node: _Node) -> bool:
+        """Whether the sets that a row takes to hold a site do so at a node."""
+        return row.loss is None or all(any(split == other and not at_most and count >= 1 for other, at_most, count in node.path)
+                                       for split, _ in row.loss.within)
 
     def _enter(self, node: _Node) -> None:
         """Set the program to a node's bounds."""
@@ -172,6 +226,9 @@ class Tree:
         low, high = self._counts(node)
         self.program.set_counts(low, high)
         self.program.set_bounds(node.lower[self.program.sites], node.upper[self.program.sites])
+        for index, row in enumerate(self.pool[row] for row in self.held):
+            if row.loss is not None and row.loss.within:
+                self.program.use_cover(index, row.prior, self._usable(row, node))
 
     def _counts(self, node: _Node) -> tuple[Array, Array]:
         """Bounds of the program's count rows at a node; several bounds on one split keep the tightest."""
@@ -180,6 +237,9 @@ class Tree:
         for index, (_, least, most) in enumerate(self.rules):
             low[index], high[index] = least, most
         place = {split: len(self.rules) + index for index, split in enumerate(self.counted)}
+        for split in self.cliques:
+            if split in place:
+                high[place[split]] = 1.0
         for split, at_most, count in node.path:
             if at_most:
                 high[place[split]] = min(high[place[split]], count)
@@ -232,7 +292,8 @@ class Tree:
         low, high = self._counts(node)
         mu = solution.counts
         mu = np.where(mu > 0, np.where(np.isfinite(high), mu, 0.0), np.where(np.isfinite(low), mu, 0.0))
-        y = solution.y
+        y = np.array([value if self._usable(self.pool[row], node) else 0.0
+                      for value, row in zip(solution.y, self.held, strict=True)])
         packed, prior = np.zeros(self.gram.width), 0.0
         active = np.flatnonzero(y > 0)
         for index in active:
@@ -240,6 +301,10 @@ class Tree:
             prior += y[index] * self.pool[self.held[index]].prior
             self.row_used[index] = self.nodes
         price = self.gram.coefficients(packed)
+        for index in active:
+            if self.pool[self.held[index]].loss is not None:
+                sites, more = self._without_loss(self.pool[self.held[index]])
+                price[sites] += y[index] * more
         price -= solution.budget * self.cost
         value = prior + solution.budget * self.count
         scale = abs(prior) + solution.budget * self.count + y.sum()
@@ -254,6 +319,7 @@ class Tree:
                 rules.append((int(index), float(mu[index])))
             else:
                 counts.append((self.counted[index - len(self.rules)], float(mu[index])))
+                self.clique_used[self.counted[index - len(self.rules)]] = self.nodes
         value += np.maximum(price * node.lower, price * node.upper).sum()
         multipliers = Multipliers(np.array([self.held[index] for index in active], np.int64), y[active],
                                   solution.budget, tuple(rules), tuple(counts))
@@ -284,6 +350,8 @@ class Tree:
         for _ in range(MOST_ROUNDS):
             if stop():
                 break
+            if self.lost and len(self.held) > self.most_held:
+                self._shed(node)
             solution = self.program.solve()
             sites = np.array(self.program.sites)
             if solution is None:
@@ -308,27 +376,64 @@ class Tree:
             found = self._found(sites, w)
             if found is not None:
                 return found
+            broken, after = self._broken(node, sites, w, ratios)
+            if self._overfull(node, sites, w):
+                for row in broken:
+                    self._add_row(row)
+                continue
+            worst = max(worst, after)
             if worst <= 1.0:
                 return sites, w
             if worst * solution.t <= 1.0 + 1e-9:  # the program is solved, and only the margin keeps the node open
                 break
-            rows = self._new_rows(ratios, solved)
+            rows = self._new_rows(ratios, solved) + broken if ratios.max(initial=0.0) > 1.0 else broken
             if centre is not None:
                 middle = np.union1d(sites, centre[0])
                 weight = np.zeros(self.n)
                 weight[sites] += 0.5 * w
                 weight[centre[0]] += 0.5 * centre[1]
                 ratios, solved = self._variances(middle, weight[middle])
-                rows += self._new_rows(ratios, solved)
-                if ratios.max(initial=0.0) < best_ratio:
-                    best_ratio, centre = float(ratios.max(initial=0.0)), (middle, weight[middle])
+                broken, after = self._broken(node, middle, weight[middle], ratios)
+                rows += (self._new_rows(ratios, solved) if not self.lost or ratios.max(initial=0.0) > 1.0 else []) + broken
+                if max(ratios.max(initial=0.0), after) < best_ratio:
+                    best_ratio, centre = max(float(ratios.max(initial=0.0)), after), (middle, weight[middle])
             for row in rows:
                 self._add_row(row)
-            slow = slow + 1 if last_t - solution.t < 0.02 * (solution.t - 1.0) else 0
+            slow = slow + 1 if last_t - solution.t < (0.02) * (solution.t - 1.0) else 0
             last_t = solution.t
             if slow >= 4:
                 break
         return sites, w
+
+    def _broken(self, node: _Node, sites: Indices, w: Array, ratios: Array) -> tuple[list[Row], float]:
+        """Rows of limits that do not bear a loss, and the worst ratio after one."""
+        if not self.lost:
+            return [], 0.0
+        at = Weighed(self.split, sites, w, [block.rows[self.order[sites]] for block in self.blocks], RIDGE)
+        rows, worst = lost_rows(at, ratios, self.lost, LOST_ROWS)
+        known = [(split, self.masks[split]) for split, at_most, count in node.path
+                 if split in self.anchors and not at_most and count >= 1]
+        return rows + within_rows(at, ratios, known, LOST_ROWS), worst
+
+    def _overfull(self, node: _Node, sites: Indices, w: Array) -> bool:
+        """Adds the discs that hold more than one site's weight; whether there were any."""
+        found = [] if self.discs is None else self.discs.overfull(sites, w, NEW_CLIQUES)
+        for members in found:
+            mask = np.zeros(self.n, bool)
+            mask[members] = True
+            self.cliques.append(self._named(mask))
+            self.program.add_count(mask[self.program.sites])
+            self.counted.append(self.cliques[-1])
+            self.clique_used[self.cliques[-1]] = self.nodes
+        if found:
+            self.program.set_counts(*self._counts(node))
+        return bool(found)
+
+    def _named(self, mask: NDArray[np.bool_]) -> int:
+        """A new split on the sites named."""
+        self.halves.append(self.splits.named(mask))
+        self.masks.append(mask)
+        return len(self.halves) - 1
 
     def _entering(self, node: _Node, price: Array) -> Indices:
         """Sites to give a column: the best priced, no two nearly alike."""
@@ -357,7 +462,9 @@ class Tree:
         if mask @ self.cost > self.count + 1e-9 or not all(low <= (mask & rule).sum() <= high
                                                            for rule, low, high in self.rules):
             return None
-        return chosen if self.split.ratios(chosen).max(initial=0.0) <= FEASIBLE else None
+        if self.discs is not None and not spaced(self.discs.xy[sites[w > 0.5]], self.problem.spacing):
+            return None
+        return chosen if ratios_after_loss(self.split, chosen, self.lost).max(initial=0.0) <= FEASIBLE else None
 
     def run(self, stop: Callable[[], bool], progress: Callable[[float, float], None] | None = None
             ) -> tuple[str, Indices | None]:
@@ -369,7 +476,7 @@ class Tree:
                 return "open", None
             node = self.stack.pop()
             self.nodes += 1
-            outcome = self._close(node, stop)
+            outcome = self._close(node, stop) if not node.anchors else (node.sites, node.w)
             if outcome is None:
                 continue
             if isinstance(outcome, np.ndarray):
@@ -381,27 +488,44 @@ class Tree:
 
     def certificate(self) -> dict[str, Any]:
         """The proof that was written down, once `run` says "impossible"."""
-        return tree_certificate(self.split, self.problem, self.count, self.pool, self.halves, self.proof)
+        return tree_certificate(self.split, self.problem, self.count, self.pool, self.halves, self.proof,
+                                self.order, self.cliques)
 
     def _branch(self, node: _Node, sites: Indices, w: Array) -> None:
-        solution = self.program.solve()
-        if solution is not None:
-            slack, price, margin, multipliers = self._price(node, solution)
-            if slack > margin:
-                self.proof.append(Step("leaf", multipliers))
-                return
-            self._fix(node, slack, price, margin, multipliers)
-        half = self._best_split(sites, w) or self.splits.single(sites, w)
+        anchors = node.anchors
+        if not anchors:
+            solution = self.program.solve()
+            if solution is not None:
+                slack, price, margin, multipliers = self._price(node, solution)
+                if slack > margin:
+                    self.proof.append(Step("leaf", multipliers))
+                    return
+                self._fix(node, slack, price, margin, multipliers)
+            anchors = self._clusters(node, sites, w) if self.lost else ()
+        half = anchors[0] if anchors else self._best_split(sites, w) or self.splits.single(sites, w) or self._undecided(node)
         if half is None:
             self.undecided = True
             return
         self.halves.append(half)
         self.masks.append(half.mask)
         split = len(self.halves) - 1
+        if anchors:
+            self.anchors.append(split)
         self.proof.append(Step("split", None, split, half.at_most))
         for at_most, count in ((False, half.at_most + 1), (True, half.at_most)):
             self.stack.append(_Node(node.lower.copy(), node.upper.copy(), (*node.path, (split, at_most, count)),
-                                    sites, w))
+                                    sites, w, () if at_most else anchors[1:]))
+
+    def _undecided(self, node: _Node) -> HalfSpace | None:
+        """A site that the node leaves open, for weights that are whole though not all rows were looked at."""
+        if not self.lost:
+            return None
+        open_ = node.lower < node.upper
+        for split, _, _ in node.path:
+            if self.masks[split].sum() == 1:
+                open_ &= ~self.masks[split]
+        first = np.flatnonzero(open_)[:1]
+        return self.splits.named(np.isin(np.arange(self.n), first)) if len(first) else None
 
     def _best_split(self, sites: Indices, w: Array) -> HalfSpace | None:
         """Strong branching: of the splits proposed, the one whose children lose most t, by the product of both losses."""
@@ -415,6 +539,35 @@ class Tree:
             if losses[0] * losses[1] > best_score:
                 best, best_score = half, losses[0] * losses[1]
         return best
+
+    def _clusters(self, node: _Node, sites: Indices, w: Array) -> tuple[HalfSpace, ...]:
+        """Clusters of sites alike that probably hold a chosen site each, so that their best may be lost: of the balls around
+        heavy sites, apart from each other and from the node's own, those with the widest gaps around them."""
+        known = [split for split, _, _ in node.path if split in self.anchors]
+        covered = np.any([self.masks[split] for split in known], axis=0) if known else np.zeros(self.n, bool)
+        rows = np.concatenate([block.rows.reshape(self.n, -1) for block in self.blocks], axis=1)[self.order]
+        found: list[HalfSpace] = []
+        while len(known) + len(found) < MOST_CLUSTERS:
+            outside = np.flatnonzero(~covered[sites])
+            best, best_gap = None, LEAST_GAP
+            for centre in sites[outside[np.argsort(-w[outside], kind="stable")[:CLUSTER_TRIES]]]:
+                distance = np.linalg.norm(rows[sites[outside]] - rows[centre], axis=1)
+                order = np.argsort(distance, kind="stable")
+                reach, held = distance[order], np.cumsum(w[outside][order])
+                enough = np.flatnonzero(held[:-1] >= CLUSTER_WEIGHT)
+                gaps = reach[enough + 1] / np.maximum(reach[enough], 1e-3 * reach[-1:] + 1e-300)
+                if len(gaps) and gaps.max() > best_gap:
+                    at = enough[int(np.argmax(gaps))]
+                    mask = np.linalg.norm(rows - rows[centre], axis=1) <= \
+                        CLUSTER_REACH * reach[at + 1] + (1 - CLUSTER_REACH) * reach[at]
+                    mask &= ~covered
+                    if mask.mean() <= CLUSTER_SHARE:
+                        best, best_gap = mask, gaps.max()
+            if best is None:
+                break
+            found.append(self.splits.named(best))
+            covered |= best
+        return tuple(found)
 
     def _caps(self, sites: Indices, w: Array) -> list[tuple[int, Array]]:
         """(block, −M⁻¹bᵢ) of the most fractional sites i: bᵢᵀM⁻¹b is large for the sites that tell the same as i.

@@ -29,6 +29,8 @@ BLOCK_ERROR = 1e-13
 """The rebuilt readings and directions are true to this share of the largest reading of each term: a few roundings."""
 HELD_COEFFICIENTS = 40_000_000
 """Up to this many coefficients are held (320 MB); beyond it each step forms its own."""
+CLOSE = 1 - 1e-12
+"""Sites at just the spacing, whatever the rounding of their distance, are not too close."""
 FULL_RANK = 1e-7
 SPLIT, FIX, LEAF = 0, 1, 2
 SQUARE, NAMED = -1, -2
@@ -42,7 +44,8 @@ def gamma(terms: int) -> float:
 @dataclass(frozen=True, slots=True)
 class Evidence:
     """The question, rebuilt: whitened `blocks` (n, m, p), `prior` (p, p), `cost` (n,), fixed sites, rules as (mask, least,
-    most), and `key` (n,). `directions(rows)` gives c/τ of each row of a certificate, (R, p), or raises CertificateError."""
+    most), and `key` (n,). Any `lost` chosen sites may be lost; sites at `xy` (n, 2) closer than `spacing` may not both be
+    chosen. `directions(rows)` gives c/τ of each row of a certificate, (R, p), or raises CertificateError."""
 
     blocks: Array
     prior: Array
@@ -52,6 +55,9 @@ class Evidence:
     rules: tuple[tuple[Mask, float, float], ...]
     key: NDArray[Any]
     directions: Callable[[dict[str, Any]], Array]
+    lost: int = 0
+    xy: Array | None = None
+    spacing: float = 0.0
 
 
 @dataclass(frozen=True, slots=True)
@@ -130,8 +136,9 @@ class _Walk:
         self.largest = np.abs(evidence.blocks).max(axis=(0, 1), initial=0.0)
         self.z = _finite(certificate["rows"]["z"], "rows.z").reshape(-1, p)
         self.income = self._income(evidence.directions(certificate["rows"]))
-        halves = certificate["halves"]
-        self.masks = self._half_spaces(halves)
+        self.masks = self._half_spaces(certificate["halves"])
+        self.cliques = self._cliques(certificate.get("cliques", []))
+        self.losses = self._losses(certificate.get("losses", []))
         steps = certificate["steps"]
         self.steps = [np.asarray(steps[name]).astype(int) for name in ("kind", "split", "at_most")]
         self.budget = _finite(steps["budget"], "steps.budget")
@@ -158,7 +165,41 @@ class _Walk:
         error = (gamma(p) + BLOCK_ERROR) * (np.abs(self.z[rows]) @ self.largest)[:, None]
         for axis in range(m):
             total += (np.abs(self.z[rows] @ self.evidence.blocks[:, axis].T) + error) ** 2
-        return total * (1 + gamma(m))
+        total *= 1 + gamma(m)
+        for place, row in enumerate(rows):
+            if int(row) in self.losses:
+                gone, within = self.losses[int(row)]
+                total[place, gone] = 0.0
+                for half, theta in within:
+                    total[place, self.masks[half]] = np.maximum(total[place, self.masks[half]], theta)
+        return total
+
+    def _cliques(self, halves: Any) -> list[int]:
+        """Half-spaces whose sites may not be chosen together: all closer than the spacing."""
+        evidence = self.evidence
+        for half in (found := [int(half) for half in halves]):
+            if evidence.xy is None or not 0 <= half < len(self.masks):
+                raise CertificateError(f"certificate: clique {half} needs a spacing and a half-space of its own")
+            at = evidence.xy[self.masks[half]]
+            if len(at) > 1 and not np.linalg.norm(at[:, None] - at, axis=2).max() < evidence.spacing * CLOSE:
+                raise CertificateError(f"certificate: two sites of clique {half} are not closer than the spacing")
+        return found
+
+    def _losses(self, losses: Any) -> dict[int, tuple[Mask, list[tuple[int, float]]]]:
+        """Rows that hold after a loss: which sites are lost, and the half-spaces that lose their best with their θ."""
+        found: dict[int, tuple[Mask, list[tuple[int, float]]]] = {}
+        for loss in losses:
+            row, keys = int(loss["row"]), list(loss["keys"])
+            within = [(int(half), float(theta)) for half, theta in zip(loss["half"], loss["theta"], strict=True)]
+            if not 0 <= row < len(self.z) or row in found or len(keys) + len(within) > self.evidence.lost:
+                raise CertificateError(f"certificate: row {row} loses more than {self.evidence.lost} sites, or is named twice")
+            if any(not 0 <= half < len(self.masks) or not theta >= 0 for half, theta in within) or (
+                    len(within) > 1 and np.sum([self.masks[half] for half, _ in within], axis=0).max() > 1):
+                raise CertificateError(f"certificate: row {row} names half-spaces that are not there, overlap or gain")
+            found[row] = (np.isin(self.evidence.key, np.asarray(keys)) if keys else np.zeros(len(self.evidence.key), bool),
+                          within)
+            self.income[row] += sum(theta for _, theta in within) * (1 - 4 * UNIT)
+        return found
 
     def _half_spaces(self, halves: dict[str, Any]) -> list[Mask]:
         """Which sites each half-space holds. Any set does for a split, so rounding at the edge cannot harm the proof."""
@@ -178,7 +219,7 @@ class _Walk:
 
     def run(self) -> Proven:
         required, forbidden = self.evidence.required, self.evidence.forbidden
-        start = _Place(required.astype(np.int8), (~forbidden | required).astype(np.int8), {}, {})
+        start = _Place(required.astype(np.int8), (~forbidden | required).astype(np.int8), {}, dict.fromkeys(self.cliques, 1))
         stack, leaves = [start], 0
         proven = np.inf
         for number in range(len(self.budget)):
@@ -227,6 +268,9 @@ class _Walk:
         budget = float(self.budget[number])
         if (y < 0).any() or budget < 0 or (self.kind == "bound" and budget == 0):
             raise CertificateError(f"certificate: step {number} has a negative multiplier")
+        for row in rows[y > 0]:
+            if any(place.least.get(half, 0) < 1 for half, _ in self.losses.get(int(row), (None, []))[1]):
+                raise CertificateError(f"certificate: step {number} takes a half-space to hold a site that may hold none")
         held = self._coefficients(rows) if self.coefficients is None else self.coefficients[rows]
         income = float(y @ self.income[rows])
         size = float(y @ np.abs(self.income[rows]))

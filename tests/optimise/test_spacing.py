@@ -2,11 +2,22 @@
 
 from __future__ import annotations
 
+import copy
+from dataclasses import replace
+
 import numpy as np
 import pytest
+from enumeration import cheapest, ruled_evidence, small_problem
+from random_problems import grid_problem
 from scipy.spatial.distance import pdist, squareform
 
+from sampler.errors import CertificateError
+from sampler.optimise.blocks import split
+from sampler.optimise.relaxation import relax
+from sampler.optimise.search import search
 from sampler.optimise.spacing import Discs, conflicts, spaced
+from sampler.optimise.tree import decide
+from sampler.tasks.proof_check import check_proof
 
 
 @pytest.mark.parametrize("seed", range(100))
@@ -53,3 +64,53 @@ def test_nothing_has_weight():
     xy = np.zeros((3, 2))
     assert Discs(xy, 1.0).overfull(np.arange(3), np.zeros(3), 5) == []
     assert conflicts(xy[:0], 1.0).shape == (0, 0)
+
+
+@pytest.mark.parametrize("seed", range(60))
+def test_search_and_proof_against_enumeration(seed, monkeypatch):
+    monkeypatch.setattr("sampler.optimise.search.LEAST_POLISH", 0.01)
+    monkeypatch.setattr("sampler.optimise.search.LEAST_BOUND", 0.01)
+    problem = small_problem(seed, spacing=float(np.random.default_rng(seed).uniform(0.1, 0.6)), lost=int(seed % 5 == 4))
+    cost, _ = cheapest(problem)
+    result = search(problem, seconds=5, seed=1)
+    assert result.lower_bound <= cost + 1e-6
+    if np.isinf(cost):
+        assert result.chosen is None
+        return
+    assert result.status == "proven"
+    assert problem.cost[result.chosen].sum() == cost
+    assert spaced(problem.xy[result.chosen], problem.spacing)
+    proven = check_proof(ruled_evidence(problem), result.certificate).lower_bound
+    assert np.ceil(proven - 1e-6) == cost
+
+
+def dense(side, spacing):
+    grid = np.linspace(-1, 1, side)
+    xy = np.stack([part.ravel() for part in np.meshgrid(grid, grid)], axis=1)
+    return replace(grid_problem(side, 2, 31.0), xy=xy, spacing=spacing)
+
+
+def test_discs_prove_what_no_spacing_does_not():
+    problem = dense(27, 0.25)
+    plain = replace(problem, xy=None, spacing=0.0)
+    count = float(np.floor(relax(split(plain), plain, seconds=20).bound)) + 1
+    decision = decide(split(problem), problem, count, seconds=20)
+    assert decision.status == "impossible"
+    assert decision.certificate["cliques"]
+    assert decide(split(plain), plain, count, seconds=20).status == "possible" or count < 23
+
+
+def test_the_checker_refuses_cliques_that_are_not():
+    problem = dense(27, 0.25)
+    count = float(np.floor(relax(split(problem), problem, seconds=20).bound)) + 1
+    certificate = decide(split(problem), problem, count, seconds=20).certificate
+    evidence = ruled_evidence(problem)
+    assert check_proof(evidence, certificate).lower_bound == count + 1
+    with pytest.raises(CertificateError, match="not closer than the spacing"):
+        check_proof(replace(evidence, spacing=0.1), certificate)
+    with pytest.raises(CertificateError, match="needs a spacing"):
+        check_proof(replace(evidence, xy=None), certificate)
+    other = copy.deepcopy(certificate)
+    other["cliques"] = []
+    with pytest.raises(CertificateError, match="leans on a count that has no bound"):
+        check_proof(evidence, other)
