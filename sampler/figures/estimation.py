@@ -1,4 +1,4 @@
-"""What pilot panels said, drawn: residual vectors, variogram, ladder of models, terms panel by panel."""
+"""What measured panels said, drawn: residual vectors, variogram, ladder of models, terms panel by panel, term charts."""
 
 from __future__ import annotations
 
@@ -8,11 +8,13 @@ import numpy as np
 from matplotlib.axes import Axes
 from matplotlib.figure import Figure
 from matplotlib.patches import Polygon
+from matplotlib.ticker import MaxNLocator
 from numpy.typing import NDArray
 
 from sampler.figures import style
 from sampler.panel.layout import Layout
 from sampler.tasks.characterise import Characterisation
+from sampler.tasks.fit import FitResult
 from sampler.tasks.wording import plain, significant
 
 Array = NDArray[np.float64]
@@ -147,8 +149,8 @@ def _variogram(result: Characterisation) -> Figure:
                       label=f"{fit.family}: range {significant(fit.range_mm)} mm")
         axes.set(xlabel="distance, mm", ylabel="half mean squared difference, µm²", ylim=(0, None), xlim=(0, None))
         p = "" if axis.moran is None else f", p = {axis.moran.p_value:.2g}"
-        axes.set_title(f"{name}: neighbours {'alike' if axis.correlated else 'not alike'}{p}", fontsize=style.TEXT_PT + 0.5, loc="left",
-                       pad=24)
+        alike = "alike" if axis.correlated else "not alike"
+        axes.set_title(f"{name}: neighbours {alike}{p}", fontsize=style.TEXT_PT + 0.5, loc="left", pad=24)
         axes.legend(loc="lower left", bbox_to_anchor=(-0.02, 0.99), frameon=False, fontsize=style.SMALL_PT, ncols=3,
                     columnspacing=0.9, handlelength=1.5, handletextpad=0.4)
     headed(drawn, "How alike neighbours are", "variogram of the residuals; curves as the fit of the model lets them be seen")
@@ -199,18 +201,55 @@ def _terms(result: Characterisation) -> Figure:
         axes.errorbar(place, value, 2 * u, fmt="none", ecolor=style.FAINT, elinewidth=0.9, zorder=1)
         for which in np.unique(lot):
             mine = lot == which
-            axes.plot(place[mine], value[mine], marks[which % len(marks)], color=style.FILL if which % 2 == 0 else style.ALARM_INK,
-                      markersize=3.2, zorder=2)
+            axes.plot(place[mine], value[mine], marks[which % len(marks)], markersize=3.2, zorder=2,
+                      color=style.FILL if which % 2 == 0 else style.ALARM_INK)
         axes.axhline(float(value.mean()), color=style.SOFT, linewidth=0.7, zorder=0)
         axes.set_title(f"{plain(name, 26)}, {result.terms.units[number]}", fontsize=style.SMALL_PT + 0.5, loc="left", pad=3)
-        axes.tick_params(labelsize=style.SMALL_PT)
-        axes.set_xlim(-0.6, len(place) - 0.4)
-        axes.xaxis.get_major_locator().set_params(integer=True, nbins=5)
-        axes.xaxis.set_major_formatter(lambda at, _: f"{at + 1:g}")
-        axes.set_xlabel("panel, in order of time" if number >= len(names) - columns else "", fontsize=style.SMALL_PT)
+        _panel_axis(axes, len(place), number >= len(names) - columns)
     for axes in made[len(names):]:
         axes.set_axis_off()
     more = f"; first {MOST_TERMS} of {len(result.terms)}" if len(result.terms) > MOST_TERMS else ""
     headed(drawn, "Terms panel by panel", f"with 2u, the mean as a line{more}" +
            ("; marks tell lots apart" if len(np.unique(lot)) > 1 else ""))
+    return drawn
+
+
+def _panel_axis(axes: Axes, panels: int, named: bool) -> None:
+    axes.set_xlim(-0.6, panels - 0.4)
+    axes.xaxis.set_major_locator(MaxNLocator(nbins=5, integer=True))
+    axes.xaxis.set_major_formatter(lambda at, _: f"{at + 1:g}")
+    axes.tick_params(labelsize=style.SMALL_PT)
+    axes.set_xlabel("panel, in order of time" if named else "", fontsize=style.SMALL_PT)
+
+
+def term_charts(result: FitResult) -> dict[str, bytes]:
+    """`terms.png` and `terms.svg`: each term over the panels in order of time, with its limits of three sigma."""
+    return style.pictures("terms", lambda: _charts(result))
+
+
+def _charts(result: FitResult) -> Figure:
+    model = result.study.model
+    names = sorted(range(len(model)), key=lambda j: -int(result.charts[model.names[j]].outside.sum()))[:MOST_TERMS]
+    names = sorted(names)
+    columns = min(2, len(names))
+    rows = -(-len(names) // columns)
+    drawn, made = boxes(columns, rows, (3.6, 1.05), (0.6, 0.45), (0.65, 0.25, 1.0, 0.55))
+    place = np.arange(len(result.panel))
+    size = 3.0 if len(place) <= 100 else 1.4
+    for number, (axes, j) in enumerate(zip(made, names, strict=False)):
+        chart, value = result.charts[model.names[j]], result.theta[:, j]
+        if len(place) <= 100:
+            axes.errorbar(place, value, 2 * result.u[:, j], fmt="none", ecolor=style.HAIR, elinewidth=0.9, zorder=1)
+        for level, dashes in ((chart.lower, (4, 2)), (chart.mean, (1, 0)), (chart.upper, (4, 2))):
+            if np.isfinite(level):
+                axes.axhline(level, color=style.SOFT, linewidth=0.7, dashes=dashes, zorder=0)
+        axes.plot(place[~chart.outside], value[~chart.outside], "o", color=style.FILL, markersize=size, zorder=2)
+        axes.plot(place[chart.outside], value[chart.outside], "D", color=style.ALARM_INK, markersize=size + 1, zorder=3)
+        axes.set_title(f"{plain(model.names[j], 40)}, {model.units[j]}", fontsize=style.SMALL_PT + 0.5, loc="left", pad=3)
+        _panel_axis(axes, len(place), number >= len(names) - columns)
+    for axes in made[len(names):]:
+        axes.set_axis_off()
+    outside = sum(int(chart.outside.sum()) for chart in result.charts.values())
+    more = f"; {MOST_TERMS} of {len(model)} terms" if len(model) > MOST_TERMS else ""
+    headed(drawn, "Terms over time", f"dashed: mean ± 3 sigma of neighbouring panels; {outside} values outside (diamonds){more}")
     return drawn

@@ -7,10 +7,15 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
+import numpy as np
+
+from sampler.errors import InputError
 from sampler.files.faults import Faults
 from sampler.files.schema import Key, format_number, read_keys, table, tables, text
 from sampler.files.source import read_bytes, shown_path
-from sampler.tasks.study import Source
+from sampler.files.study import read_study
+from sampler.panel.layout import Sites
+from sampler.tasks.study import Source, Study
 
 A_PLAN = "the plan.json of a result, or its folder"
 SOURCE = table(Key("path", text, "the path of the file"), Key("sha256", text, "its SHA-256"))
@@ -42,6 +47,16 @@ class PlanFile:
         above = [folder / recorded for folder in self.path.resolve().parents]
         return next((path for path in [recorded, *above] if path.is_file()), recorded)
 
+    def sites_of(self, study: Study) -> Sites:
+        """The plan's marks in visiting order. Raises InputError when the layout no longer has them."""
+        marks = study.layout.marks
+        row_of = {name: row for row, name in enumerate(marks.id.tolist())}
+        gone = [name for name in self.ids if name not in row_of]
+        if gone:
+            raise InputError(f"{shown_path(self.path)}: {len(gone)} of {len(self.ids)} sites, \"{gone[0]}\" first, are not in the "
+                             f"layout {study.layout_source.path}; plan again")
+        return marks.take(np.array([row_of[name] for name in self.ids], np.int64))
+
 
 def read_plan(path: str | Path) -> PlanFile:
     """The plan in a plan.json, or in the folder that holds it. Raises InputError with every fault."""
@@ -70,6 +85,15 @@ def read_plan(path: str | Path) -> PlanFile:
         faults.add("a site is listed more than once; plan again")
     faults.close()
     return PlanFile(path, tuple(ids), Source(**values["study"]), Source(**values["layout"]), values["version"], written)
+
+
+def planned(path: str | Path) -> tuple[Study, Sites | None]:
+    """The study of a plan, with its sites in visiting order, or of a study file, without."""
+    if not (Path(path).is_dir() or Path(path).suffix.lower() == ".json"):
+        return read_study(path), None
+    plan = read_plan(path)
+    study = read_study(plan.study_path())
+    return study, plan.sites_of(study)
 
 
 def _no_constant(name: str) -> float:

@@ -23,8 +23,8 @@ def characterise_summary(result: Characterisation) -> str:
     reach = f", alike over {significant(result.noise.local_range_mm)} mm" if result.noise.local_range_mm else ""
     lines += sentence(f"For a plan: mark_um {_pair(result.noise.mark_um)}, local_um {_pair(result.noise.local_um)}{reach}")
     lines += sentence(_variation(result))[:3]
-    rates = [f"{100 * rate.rate:.3g} % of {counted(rate.tried, 'reading')}" + (f" of kind {plain(rate.kind, 20)}" if rate.kind else "")
-             for rate in result.rates[:3]]
+    rates = [f"{100 * rate.rate:.3g} % of {counted(rate.tried, 'reading')}"
+             + (f" of kind {plain(rate.kind, 20)}" if rate.kind else "") for rate in result.rates[:3]]
     lines += sentence("Read: " + "; ".join(rates))[:2]
     lines += sentence(f"{counted(len(result.outliers), 'reading')} flagged as not belonging" +
                       (" (outliers.csv)" if result.outliers else ""))

@@ -29,6 +29,8 @@ WINDOW = 5
 """Panels of the latest verdict."""
 DOUBT = 0.001
 """A chance below this is called a change: with a verdict a day, one false alarm in three years."""
+MATERIAL = 1.1
+"""Residuals this many times the assumed sigma are as assumed, whatever many panels can tell: no pilot knows it better."""
 MEETS = 1.0 + 1e-9
 
 
@@ -293,7 +295,9 @@ class _LimitRows:
 
     def predicted(self, covariance: Array) -> Array:
         """k·u of each limit, (L,); a region at the worst point of its raster."""
-        variance = ((self.rows @ covariance) * self.rows).sum(axis=1) + self.fixed_um2
+        used = np.flatnonzero((self.rows != 0).any(axis=0))
+        rows = self.rows[:, used]
+        variance = ((rows @ covariance[np.ix_(used, used)]) * rows).sum(axis=1) + self.fixed_um2
         worst = np.zeros(len(self.label))
         np.maximum.at(worst, self.of, variance)
         return self.coverage_factor * np.sqrt(worst)
@@ -317,7 +321,9 @@ def _verdicts(study: Study, readings: Readings, averages: Averages, chi_square: 
 def _noise_verdict(on: str, found: Pooled) -> Verdict:
     if found.degrees_of_freedom <= 0:
         return Verdict(f"{on}: no more readings than terms, so the noise cannot be checked", True, 1.0)
-    said = f"residual {found.ratio:.2g} × the assumed sigma on {on}, p = "
+    said = f"residual {found.ratio:.3g} × the assumed sigma on {on}, p = "
+    if found.p_value < DOUBT and found.ratio <= MATERIAL:
+        return Verdict(f"{said}{found.p_value:.2g}: more than assumed, by less than a pilot can tell", True, found.p_value)
     if found.p_value < DOUBT:
         return Verdict(f"{said}{found.p_value:.2g}: characterise again", False, found.p_value)
     if found.p_below < DOUBT:
