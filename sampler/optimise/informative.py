@@ -31,8 +31,8 @@ UNIFORM = 0.5
 """Share of the starts that draw sites evenly; the others draw by the weights of the continuous optimum."""
 PATIENCE = 6
 """Kicks without gain before a new start."""
-RETURNS, RETURNS_PER_GAP = 5, 40
-"""The search ends when so many starts have come to the best value; more where the bound leaves room above it."""
+RETURNS, RETURNS_PER_GAP, SMALL_GAP = 5, 40, 0.1
+"""The search ends when so many starts have come to the best value; more where the bound leaves much room above it."""
 STARTS = 400
 
 
@@ -169,7 +169,8 @@ def _best_set(split: Split, problem: SiteProblem, budget: float, limited: bool, 
     if len(chosen):
         best.offer(*pools.polished(chosen, best.value))
     for number in range(starts):
-        if clock.over() or best.returns >= RETURNS + RETURNS_PER_GAP * min(1.0, max(0.0, bound - best.value)):
+        gap = float(np.clip(bound - best.value, SMALL_GAP, 1.0)) - SMALL_GAP
+        if clock.over() or best.returns >= RETURNS + RETURNS_PER_GAP * gap:
             break
         if number % SAME_POOL == 0:
             climb = pools.climb(peak.gains, best.sites)

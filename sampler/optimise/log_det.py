@@ -79,6 +79,7 @@ class _Bounder:
         self.required = np.flatnonzero(problem.required)
         self.free = ~problem.required & ~problem.forbidden
         self.rank = key_rank(problem)
+        self.ridge = RIDGE * max(1.0, self.budget / problem.cost.mean()) / problem.n
         self.terms = determinants(split, problem)
         self.limits = np.arange(split.limits if limited else 0)
         self.watch = self.limits
@@ -148,8 +149,7 @@ class _Bounder:
     def _matrices(self, weights: Array) -> list[Array]:
         """P₀ + Σ wᵢBᵢᵀBᵢ of each term, with a ridge: any M₀ gives a valid tangent."""
         used = np.flatnonzero(weights)
-        ridge = RIDGE * self.budget / self.problem.n
-        return [weighted_information(term.rows[used], term.prior, weights[used]) + ridge * np.eye(term.rows.shape[2])
+        return [weighted_information(term.rows[used], term.prior, weights[used]) + self.ridge * np.eye(term.rows.shape[2])
                 for term in self.terms]
 
     def _ratios(self, weights: Array) -> Array:
@@ -217,7 +217,7 @@ class _Bounder:
 
     def _program(self, columns: Indices) -> Concave:
         problem = self.problem
-        terms = [Determinant(term.weight, term.rows[columns], information(term.rows[self.required], term.prior, 0.0))
+        terms = [Determinant(term.weight, term.rows[columns], information(term.rows[self.required], term.prior, self.ridge))
                  for term in self.terms]
         rules = np.zeros((len(self.level), len(columns)))
         level = np.array(self.level, float)
