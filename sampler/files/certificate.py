@@ -64,7 +64,7 @@ def read_certificate(folder: str | Path) -> dict[str, Any]:
     """The certificate beside a plan. Raises InputError when there is none, CertificateError when it is damaged."""
     path = Path(folder) / "certificate.json"
     faults = Faults(shown_path(path))
-    data = read_bytes(path, "the certificate.json of a result", faults)
+    data = read_bytes(path, "the certificate.json of a result", faults, binary=True)
     faults.close()
     assert data is not None
     return decode_certificate(data, shown_path(path))

@@ -22,8 +22,10 @@ from sampler.errors import CertificateError
 from sampler.panel.candidates import candidates
 from sampler.panel.layout import Layout, Sites
 from sampler.panel.region import QUADRANTS, SIDE_STEP_MM, inside_region, region_points
-from sampler.tasks.proof_check import BLOCK_ERROR, Evidence, Proven, check_proof, gamma
+from sampler.tasks.certify_stops import all_stops, stop_readings
+from sampler.tasks.proof_check import Evidence, Proven, check_proof
 from sampler.tasks.study import RegionLimit, Study, TermLimit
+from sampler.tasks.variance_check import Variance
 from sampler.uncertainty.field import LocalField, local_field
 
 Array = NDArray[np.float64]
@@ -87,23 +89,24 @@ def _certify(study: Study, plan: dict[str, Any], certificate: dict[str, Any]) ->
                 raise CertificateError(f"{where}: made from another {name} than {source.path} as it is now; plan again")
     if digest(certificate) != certificate["sha256"] or plan["certificate"]["sha256"] != certificate["sha256"]:
         raise CertificateError("certificate.json: altered since it was written, or not the one of this plan.json")
-    if study.measure.field_of_view_mm is not None or study.search.objective != "sites":
-        raise CertificateError("study: counts stops or seconds; only plans that count sites can be certified so far")
+    if study.search.objective != "sites" or study.search.sites is not None:
+        raise CertificateError("study: seeks the quickest panel or a given number of sites; only plans of the fewest are "
+                               "certified")
     built = _Built(study)
-    rows = _chosen(study, plan, built.sites)
-    _check_audit(built, plan, rows)
+    units = _chosen(built, plan)
+    _check_audit(built, plan, units)
     proven = check_proof(_evidence(built), certificate)
-    count, least = len(rows), math.ceil(proven.lower_bound)
+    count, least = len(units), math.ceil(proven.lower_bound)
     if plan["lower_bound"] > least + SAME:
         raise CertificateError(f"plan.json: lower_bound is {plan['lower_bound']:g}; the certificate proves {least}")
     fewest = bool(plan["fewest_proven"])
     if fewest and least < count:
-        raise CertificateError(f"plan.json: fewest_proven, with {count} sites; the certificate proves only {least}")
-    return Certified(_sentence(count, least, fewest, proven), count, proven.lower_bound, fewest)
+        raise CertificateError(f"plan.json: fewest_proven, with {count} {built.noun}s; the certificate proves only {least}")
+    return Certified(_sentence(count, built.noun, least, fewest, proven), count, proven.lower_bound, fewest)
 
 
-def _sentence(count: int, least: int, fewest: bool, proven: Proven) -> str:
-    sites = "1 site meets" if count == 1 else f"{count} sites meet"
+def _sentence(count: int, noun: str, least: int, fewest: bool, proven: Proven) -> str:
+    sites = f"1 {noun} meets" if count == 1 else f"{count} {noun}s meet"
     rest = f"no set of fewer does ({proven.how})" if fewest or least >= count else \
         f"no set of fewer than {least} does ({proven.how}); whether {least} to {count - 1} can is open"
     return f"{sites} every limit, and {rest}."
@@ -112,8 +115,9 @@ def _sentence(count: int, least: int, fewest: bool, proven: Proven) -> str:
 # -- what the plan says of its own sites ------------------------------------------------------------------------------
 
 
-def _chosen(study: Study, plan: dict[str, Any], sites: Sites) -> NDArray[np.int64]:
-    """Candidate rows of the plan's sites, in its order."""
+def _chosen(built: _Built, plan: dict[str, Any]) -> NDArray[np.int64]:
+    """What the plan chose, sites or stops, in its order."""
+    study, sites = built.study, built.sites
     place = {str(name): row for row, name in enumerate(sites.id)}
     names = [site["id"] for site in plan["sites"]]
     unknown = [name for name in names if name not in place]
@@ -126,27 +130,35 @@ def _chosen(study: Study, plan: dict[str, Any], sites: Sites) -> NDArray[np.int6
         written = np.array([site["x_mm"], site["y_mm"]], float) + study.layout.origin_mm
         if not np.abs(written - sites.xy_mm[row]).max() <= 1e-6:
             raise CertificateError(f'plan.json: site "{site["id"]}" is written at another place than the layout\'s')
-    chosen = np.zeros(len(sites), bool)
-    chosen[rows] = True
-    missing = _required(study, sites) & ~chosen
+    missing = _required(study, sites)
+    missing[rows] = False
     if missing.any():
         raise CertificateError(f'plan.json: required site "{sites.id[np.flatnonzero(missing)[0]]}" is missing')
-    for label, mask, least, most in _counts(study, sites):
+    units = rows if built.stops is None else built.stops.stated(plan, rows, study.layout.origin_mm)
+    chosen = np.zeros(len(built.expected), bool)
+    chosen[units] = True
+    for label, mask, least, most in _counts(built):
         if not least <= (mask & chosen).sum() <= most:
-            raise CertificateError(f"plan.json: {(mask & chosen).sum()} sites where rule {label} allows {least:g} to {most:g}")
+            raise CertificateError(f"plan.json: {(mask & chosen).sum()} {built.noun}s where rule {label} allows {least:g} to "
+                                   f"{most:g}")
     spacing = study.rules.min_spacing_mm
-    if spacing is not None and len(rows) > 1 and pdist(sites.xy_mm[rows]).min() < spacing * (1 - 1e-9):
-        raise CertificateError(f"plan.json: two sites are closer than min_spacing_mm {spacing:g}")
-    return rows
+    if spacing is not None and len(units) > 1 and pdist(built.xy[units]).min() < spacing * (1 - 1e-9):
+        raise CertificateError(f"plan.json: two {built.noun}s are closer than min_spacing_mm {spacing:g}")
+    return units
 
 
 def _required(study: Study, sites: Sites) -> NDArray[np.bool_]:
     return np.isin(sites.id, study.rules.required) | np.isin(sites.kind, study.rules.required_kinds)
 
 
-def _counts(study: Study, sites: Sites) -> list[tuple[str, NDArray[np.bool_], float, float]]:
-    """(label, sites, least, most) of the rules per cell with candidates, per zone, and on all sites, in this order."""
+def _counts(built: _Built) -> list[tuple[str, NDArray[np.bool_], float, float]]:
+    """(label, units, least, most) of the rules on marks that stops must see, per cell with candidates, per zone, and on all,
+    in this order."""
+    study, sites, stops = built.study, built.sites, built.stops
     rules, found = study.rules, []
+    if stops is not None:
+        found += [(f'required "{sites.id[mark]}"', np.arange(len(sites)) == mark, 1.0, math.inf)
+                  for mark in np.flatnonzero(_required(study, sites))]
     for rule in rules.per_cell:
         grid = study.layout.grid(rule.grid)
         cell = grid.locate(sites.xy_mm)
@@ -154,23 +166,28 @@ def _counts(study: Study, sites: Sites) -> list[tuple[str, NDArray[np.bool_], fl
                    math.inf if rule.most is None else float(rule.most)) for number in range(grid.cells)
                   if (cell == number).any()]
     for zone in rules.per_zone:
-        found.append((f'per_zone "{zone.name}"', inside_region(study.layout, "polygon", zone.polygon_mm, sites.xy_mm),
-                      float(zone.least), math.inf if zone.most is None else float(zone.most)))
+        inside = inside_region(study.layout, "polygon", zone.polygon_mm, sites.xy_mm)
+        if zone.circle_mm is not None:
+            x, y, radius = zone.circle_mm
+            inside = np.hypot(sites.xy_mm[:, 0] - x, sites.xy_mm[:, 1] - y) <= radius + 1e-6
+        found.append((f'per_zone "{zone.name}"', inside, float(zone.least), math.inf if zone.most is None else float(zone.most)))
+    if stops is not None:
+        found = [(label, stops.any_of(mask), least, most) for label, mask, least, most in found]
     if rules.max_sites is not None:
-        found.append(("max_sites", np.ones(len(sites), bool), 0.0, float(rules.max_sites)))
+        found.append(("max_sites", np.ones(len(built.expected), bool), 0.0, float(rules.max_sites)))
     return found
 
 
-def _check_audit(built: _Built, plan: dict[str, Any], rows: NDArray[np.int64]) -> None:
+def _check_audit(built: _Built, plan: dict[str, Any], units: NDArray[np.int64]) -> None:
     """Recomputes every term and limit that plan.json states."""
     study, factor = built.study, built.study.coverage_factor
-    for lost in combinations(range(len(rows)), study.rules.lost) if study.rules.lost else ():
-        rest = _Variance(np.delete(built.whitened[rows], lost, axis=0), built.prior)
+    for lost in combinations(range(len(units)), study.rules.lost) if study.rules.lost else ():
+        rest = Variance(built.readings(np.delete(units, lost)), built.prior)
         for limit in study.limits:
             if not built.reached(limit, rest) <= _allowed(limit) * (MEETS if isinstance(limit, TermLimit) else 1 + REGION_SAME):
-                names = " and ".join(str(plan["sites"][site]["id"]) for site in lost)
-                raise CertificateError(f"plan.json: a limit fails when site {names} is lost")
-    variance = _Variance(built.whitened[rows], built.prior)
+                names = " and ".join(str(built.key[units[unit]]) for unit in lost)
+                raise CertificateError(f"plan.json: a limit fails when {built.noun} {names} is lost")
+    variance = Variance(built.readings(units), built.prior)
     terms = factor * np.sqrt(variance.upper(np.eye(built.size)[:len(study.model)]))
     for value, written, name in zip(terms, plan["terms"], study.model.names, strict=True):
         _same(f"plan.json: terms, {name}: k_u", written["k_u"], float(value), SAME)
@@ -200,35 +217,6 @@ def _same(where: str, written: float, value: float, tolerance: float) -> None:
         raise CertificateError(f"{where} is {written!r}; recomputed {value:.9g}")
 
 
-class _Variance:
-    """cᵀM⁻¹c rounded up. With X ≈ M⁻¹ and ‖I − XM‖ ≤ ρ < 1: |M⁻¹c − Xc| ≤ ρ/(1 − ρ)·‖Xc‖, largest entries (Rump 2010)."""
-
-    def __init__(self, rows: Array, prior: Array) -> None:
-        flat = rows.reshape(-1, rows.shape[2])
-        information = prior + flat.T @ flat
-        doubt = (gamma(len(flat)) + 3 * BLOCK_ERROR) * (np.abs(flat).T @ np.abs(flat)) + gamma(1) * np.abs(prior)
-        diagonal = np.diag(information)
-        self.scale = 1 / np.sqrt(np.where(diagonal > 0, diagonal, 1.0))
-        scaled, doubt = (part * np.outer(self.scale, self.scale) for part in (information, doubt))
-        try:
-            self.inverse = np.linalg.inv(scaled)
-        except np.linalg.LinAlgError as error:
-            raise CertificateError("plan.json: its sites leave a term undetermined") from error
-        p = len(scaled)
-        size = np.abs(self.inverse)
-        off = np.abs(np.eye(p) - self.inverse @ scaled) + size @ (doubt + gamma(p) * np.abs(scaled))
-        self.rho = float(off.sum(axis=1).max())
-        if not self.rho < 0.5:
-            raise CertificateError("plan.json: its sites leave a term undetermined")
-
-    def upper(self, directions: Array) -> Array:
-        """(K,) of directions (K, p)."""
-        c = directions * self.scale
-        solved = c @ self.inverse
-        error = self.rho / (1 - self.rho) + 2 * gamma(c.shape[1]) + BLOCK_ERROR
-        return np.abs((c * solved).sum(axis=1)) + error * np.abs(c).sum(axis=1) * np.abs(solved).max(axis=1)
-
-
 # -- the question, rebuilt --------------------------------------------------------------------------------------------
 
 
@@ -250,7 +238,8 @@ class _Built:
             local = np.sqrt(self.field.neglected(xy))[:, None] * np.asarray(noise.local_um)
         else:
             local = np.zeros(2) if noise.local_range_mm else np.asarray(noise.local_um)
-        sigma = np.sqrt(reading**2 + local**2 + np.square(measure.stop_um))
+        grouped = measure.field_of_view_mm
+        self.sigma = np.sqrt(reading**2 + local**2 + (np.square(measure.stop_um) if grouped is None else 0.0))
         self.shared = self._shared()
         deviation = [np.full(len(study.model), np.inf)]
         for prior in study.priors:
@@ -265,11 +254,22 @@ class _Built:
         for number, (sides, _) in enumerate(self.shared):
             at = self.size - 2 * (len(self.shared) - number)
             readings[:, [0, 1], [at, at + 1]] = np.isin(self.sites.side, sides)[:, None]
-        self.whitened = readings / sigma[:, :, None]
+        self.whitened = readings / self.sigma[:, :, None]
         rate = self.sites.read_rate.copy()
         for kind, given in measure.read_rate:
             rate[(self.sites.kind == kind) & (rate == 1.0)] = given
         self.expected = self.whitened * np.sqrt(rate)[:, None, None]
+        self.stops = None if grouped is None else all_stops(self.sites, grouped)
+        self.noun, self.xy, self.key = "site", xy, self.sites.id
+        if self.stops is not None:
+            self.noun, self.xy, self.key = "stop", self.stops.xy_mm, self.stops.key
+            self.expected = stop_readings(self.stops.marks, self.expected, self.sigma, measure.stop_um)
+
+    def readings(self, units: NDArray[np.int64]) -> Array:
+        """What sites or stops read, whitened, (k, m, p); a mark that two stops see counts once."""
+        if self.stops is None:
+            return self.whitened[units]
+        return stop_readings(self.stops.read(units), self.whitened, self.sigma, self.study.measure.stop_um)
 
     def _shared(self) -> list[tuple[tuple[str, ...], tuple[float, float]]]:
         """Errors common to all marks of one side, or to all read after turning over: (sides, deviations of dx and dy)."""
@@ -314,14 +314,14 @@ class _Built:
             return np.zeros((len(xy), 2))
         return np.sqrt(self.field.neglected(xy))[:, None] * np.asarray(self.field.sigma_um)
 
-    def reached(self, limit: TermLimit | RegionLimit, variance: _Variance) -> float:
+    def reached(self, limit: TermLimit | RegionLimit, variance: Variance) -> float:
         """k·u of a limit at its worst."""
         if isinstance(limit, RegionLimit):
             return self.study.coverage_factor * self.worst(limit, variance)
         held = np.eye(self.size)[[self.study.model.names.index(name) for name in limit.terms]]
         return float(self.study.coverage_factor * np.sqrt(variance.upper(held).max()))
 
-    def worst(self, limit: RegionLimit, variance: _Variance) -> float:
+    def worst(self, limit: RegionLimit, variance: Variance) -> float:
         """The largest standard uncertainty of dx or dy on a raster of the region."""
         if id(limit) not in self.rasters:
             layout = self.study.layout
@@ -361,7 +361,8 @@ class _Built:
 
 
 def _evidence(built: _Built) -> Evidence:
-    n = len(built.sites)
+    rules, n = built.study.rules, len(built.expected)
+    required = _required(built.study, built.sites) if built.stops is None else np.zeros(n, bool)
 
     def directions(rows: dict[str, Any]) -> Array:
         source, axis = np.asarray(rows["source"]).astype(int), np.asarray(rows["axis"]).astype(int)
@@ -371,8 +372,10 @@ def _evidence(built: _Built) -> Evidence:
                  for s, name, at, a, vector in zip(source, rows["term"], xy, axis, z, strict=True)]
         return np.array(found).reshape(-1, built.size)
 
-    return Evidence(built.expected, built.prior, np.ones(n), _required(built.study, built.sites), np.zeros(n, bool),
-                    tuple(rule[1:] for rule in _counts(built.study, built.sites)), built.sites.id, directions)
+    spacing = rules.min_spacing_mm or 0.0
+    return Evidence(built.expected, built.prior, np.ones(n), required, np.zeros(n, bool),
+                    tuple(rule[1:] for rule in _counts(built)), built.key, directions, rules.lost,
+                    built.xy if spacing else None, spacing)
 
 
 def _located(layout: Layout, xy: Array) -> dict[str, NDArray[np.int64]]:
