@@ -180,7 +180,7 @@ def _verdict(limit: AuditedLimit) -> str:
     """Whether the limit is missed, and its floor where it takes much of the limit: what every candidate together gives."""
     floor = limit.floor / limit.maximum
     if floor > MEETS:
-        return "below its floor: no number of sites will do"
+        return "BELOW ITS FLOOR"
     said = "" if limit.worst_ratio <= MEETS else "MISSED"
     return f"{said} floor {share(floor)}".lstrip() if floor > SHOWN_FLOOR else said
 

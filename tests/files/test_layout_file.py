@@ -26,7 +26,7 @@ def test_study(tmp_path):
                                  "dy_xy", "exposure.rotation")
     assert study.noise == Noise((0.25, 0.3), (0.4, 0.5))
     assert study.limits == (TermLimit(("scale_x", "scale_y"), 8.0), RegionLimit("panel", 2.0))
-    assert study.rules == Rules(("E-c1r1-1",), ("E-c2r2-4",), 60)
+    assert study.rules == Rules(("E-c1r1-1",), ("E-c2r2-4",), max_sites=60)
     assert study.search == SearchOptions(5.0, 3)
     assert study.layout.name == "invented small panel"
 
