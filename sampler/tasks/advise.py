@@ -11,8 +11,8 @@ from sampler.tasks.question import Question, achieved, everything, question
 from sampler.tasks.results import Audit
 from sampler.tasks.study import Study
 
-PERFECT = 1e-3
-"""Share of the reading noise that stands for a reading without any."""
+BETTER_READINGS = (0.5, 0.25, 0.1)
+"""Shares of the reading noise that are tried where a limit cannot be met."""
 
 
 def notes(study: Study) -> tuple[str, ...]:
@@ -65,16 +65,17 @@ def advise(asked: Question, audit: Audit) -> tuple[str, ...]:
 
 
 def _beside(asked: Question) -> list[str]:
-    """Where something beside the corrected terms is assumed: whether reading better could help at all."""
+    """Where something beside the corrected terms is assumed: whether better readings of all candidates would help."""
     study = asked.study
-    layout, noise = study.layout, study.noise
-    quiet = replace(layout, marks=replace(layout.marks, sigma_um=layout.marks.sigma_um * PERFECT))
-    perfect = question(replace(study, layout=quiet, noise=replace(noise, mark_um=(noise.mark_um[0] * PERFECT,
-                                                                                   noise.mark_um[1] * PERFECT))))
-    if achieved(perfect, everything(perfect)).meets_limits:
-        return ["or read the marks with less noise, mark_um: perfect readings of every candidate would do"]
-    return ["even perfect readings of every candidate miss a limit: local distortion, potential terms or shared errors set its "
-            "floor, and no number of sites beats it"]
+    marks, mark = study.layout.marks, np.asarray(study.noise.mark_um)
+    for share in BETTER_READINGS:
+        layout = replace(study.layout, marks=replace(marks, sigma_um=marks.sigma_um * share))
+        noise = replace(study.noise, mark_um=(float(mark[0] * share), float(mark[1] * share)))
+        better = question(replace(study, layout=layout, noise=noise))
+        if achieved(better, everything(better)).meets_limits:
+            return [f"or lower the reading noise mark_um to {_pair(mark * share)} µm (now {_pair(mark)})"]
+    return [f"reading noise of {BETTER_READINGS[-1]:g} × mark_um misses it too: local distortion, potential terms or shared "
+            "errors set its floor, and no number of sites beats it"]
 
 
 def _pair(values: np.ndarray) -> str:

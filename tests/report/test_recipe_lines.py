@@ -66,7 +66,7 @@ def test_bias_floors_and_what_is_assumed():
     floored = planned("floor")
     assert floored.status == "cannot"
     text = lines(plan_summary(floored))
-    assert "no number of sites beats it" in text
+    assert "no number of them beats" in text
     limit = replace(floored.audit.limits[0], floor=0.7 * floored.audit.limits[0].maximum, predicted=0.8)
     met = replace(floored, status="interval", audit=replace(floored.audit, limits=(limit,)))
     assert "floor 70 %" in plan_summary(met)
