@@ -49,6 +49,8 @@ LEAST_LOSS = 1e-4
 LOST_ROWS = 8
 NEW_CLIQUES = 12
 """Rows added at a time for losses, and for spacing."""
+WITHIN_SHARE = 0.3
+"""Of sets known to hold a site those with at most this share of all are looked at for rows."""
 LOST_PROGRAM_ROWS, NEARLY_BINDS = 300, 0.03
 """With losses the program grows beyond the first, and is then rebuilt from the rows with less slack than the second."""
 MOST_CLUSTERS, CLUSTER_TRIES, CLUSTER_WEIGHT, CLUSTER_SHARE, CLUSTER_REACH, LEAST_GAP = 14, 30, 1.0, 0.25, 0.7, 1.3
@@ -412,7 +414,7 @@ class Tree:
         at = Weighed(self.split, sites, w, [block.rows[self.order[sites]] for block in self.blocks], RIDGE)
         rows, worst = lost_rows(at, ratios, self.lost, LOST_ROWS)
         known = [(split, self.masks[split]) for split, at_most, count in node.path
-                 if split in self.anchors and not at_most and count >= 1]
+                 if not at_most and count >= 1 and self.masks[split].mean() <= WITHIN_SHARE]
         return rows + within_rows(at, ratios, known, LOST_ROWS), worst
 
     def _overfull(self, node: _Node, sites: Indices, w: Array) -> bool:
