@@ -71,5 +71,25 @@ def test_witness_is_independent():
                         if name.startswith(("sampler.optimise", "sampler.uncertainty.information"))], path
 
 
+def reached(path, seen):
+    """Every file of the package that importing a file brings in."""
+    for name in imports(path):
+        parts = name.split(".")[1:]
+        for end in range(1, len(parts) + 1):
+            for found in (ROOT.joinpath(*parts[:end]).with_suffix(".py"), ROOT.joinpath(*parts[:end], "__init__.py")):
+                if name.startswith("sampler.") and found.exists() and found not in seen:
+                    seen.add(found)
+                    reached(found, seen)
+    return seen
+
+
+def test_witness_reaches_nothing_of_the_search_either():
+    """Not through what it imports: the optimiser and the information code stay out of its process."""
+    found = {str(path.relative_to(ROOT)) for path in reached(ROOT / "tasks" / "verify.py", set())}
+    assert "estimation/least_squares.py" in found
+    assert not [name for name in found if name.startswith("optimise") or name == "uncertainty/information.py"], found
+    assert "uncertainty/information.py" in {str(path.relative_to(ROOT)) for path in reached(ROOT / "tasks" / "plan.py", set())}
+
+
 def test_no_room_for_everything():
     assert not BANNED_NAMES & {path.stem for path in MODULES} | BANNED_NAMES & {path.parent.name for path in MODULES}

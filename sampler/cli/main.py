@@ -19,6 +19,7 @@ COMMANDS = {
     "bring": "the same from a DXF, GDSII, OASIS, Gerber or Excellon file",
     "characterise": "model, noise, variation and read rates from densely measured pilot panels",
     "fit": "corrections of measured panels, whether each meets its limits, and whether the plan still holds",
+    "verify": "an independent check of a plan's claims, on simulated and on pilot panels",
     "completion": "the script that completes commands and options in your shell",
     "budget": "from pad and via to the position limit, and from a plan to the pad it supports",
 }

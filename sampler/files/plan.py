@@ -53,8 +53,8 @@ class PlanFile:
         row_of = {name: row for row, name in enumerate(marks.id.tolist())}
         gone = [name for name in self.ids if name not in row_of]
         if gone:
-            raise InputError(f"{shown_path(self.path)}: {len(gone)} of {len(self.ids)} sites, \"{gone[0]}\" first, are not in the "
-                             f"layout {study.layout_source.path}; plan again")
+            raise InputError(f"{shown_path(self.path)}: {len(gone)} of {len(self.ids)} sites, \"{gone[0]}\" first, are not in "
+                             f"the layout {study.layout_source.path}; plan again")
         return marks.take(np.array([row_of[name] for name in self.ids], np.int64))
 
 

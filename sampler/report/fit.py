@@ -30,11 +30,13 @@ def fit_summary(result: FitResult) -> str:
                           + (f" on the worst panel, {plain(result.panel[worst], 16)}" if len(result.panel) > 1 else ""))
     names, units = result.study.model.names, result.study.model.units
     single = len(result.panel) == 1
-    lines.append("Corrections (the negated terms) and k·u:" if single else "Mean correction (the negated terms), spread, outside 3 sigma:")
+    lines.append("Corrections (the negated terms) and k·u:" if single else
+                 "Mean correction (the negated terms), spread, outside 3 sigma:")
     for j in range(min(len(names), MOST_TERMS)):
         value = float(result.corrections[:, j].mean())
+        outside = int(result.charts[names[j]].outside.sum())
         beside = (f"± {significant(float(result.k_u[0, j]))}" if single else
-                  f"sd {significant(float(result.theta[:, j].std(ddof=1)))}, {int(result.charts[names[j]].outside.sum())} outside")
+                  f"sd {significant(float(result.theta[:, j].std(ddof=1)))}, {outside} outside")
         lines.append(f"  {plain(names[j], 30):30s} {significant(value):>9s} {units[j]:5s} {beside}")
     if len(names) > MOST_TERMS:
         lines.append(f"  and {len(names) - MOST_TERMS} more in corrections.csv")
