@@ -17,6 +17,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from sampler.optimise.arrow import Arrow, arrow, arrow_log_det
 from sampler.optimise.blocks import Split, split
 from sampler.optimise.certificate import bound_certificate, counting_certificate
 from sampler.optimise.counting import counting_bound, rules_admit
@@ -25,6 +26,7 @@ from sampler.optimise.informative import most_informative
 from sampler.optimise.log_det import log_det, log_det_bound
 from sampler.optimise.lost import ratios_after_loss
 from sampler.optimise.pool import cost_step
+from sampler.optimise.pooled_search import search_pooled
 from sampler.optimise.problem import SearchResult, SiteProblem
 from sampler.optimise.relaxation import FEASIBLE, Relaxation, relax
 from sampler.optimise.spacing import spaced
@@ -35,6 +37,8 @@ Indices = NDArray[np.int64]
 
 ROUNDING = 1e-7
 """A bound this little above a whole number, relatively, is not rounded up."""
+POOLED_TERMS = 60
+"""With at least so many terms, of which each site tells of a few, patterns of cells take the place of fractions of sites."""
 COST_GAP = 1e-3
 """Costs that are not whole numbers are closed in on to this share: sets of nearly the same cost are hard to tell apart."""
 FIRST_TURN = 0.2
@@ -118,6 +122,9 @@ def _search(problem: SiteProblem, began: float, until: float, rng: np.random.Gen
     def ended() -> bool:
         return time.monotonic() >= until or (stop is not None and stop())
 
+    shape = arrow(problem) if problem.p >= POOLED_TERMS and not problem.lost and not problem.spacing else None
+    if shape is not None and rules_admit(problem):
+        return _search_pooled(problem, shape, began, until, rng, progress, stop)
     parts = split(problem)
     standing = _Standing(problem, parts, began, progress)
     if not rules_admit(problem):
@@ -149,6 +156,32 @@ def _search(problem: SiteProblem, began: float, until: float, rng: np.random.Gen
         reach = log_det_bound(parts, problem, standing.cost, deadline=min(until, now + max(LEAST_BOUND, now - began))).value
     return standing.result("proven" if proven else "interval", log_det=log_det(parts, problem, chosen),
                            log_det_bound=reach, interrupted=not proven and ended())
+
+
+def _search_pooled(problem: SiteProblem, shape: Arrow, began: float, until: float, rng: np.random.Generator,
+                   progress: Progress | None, stop: Callable[[], bool] | None) -> SearchResult:
+    """The search when each cell has terms of its own; log det has no bound there."""
+    history: list[tuple[float, float, float]] = []
+
+    def tell(bound: float, chosen: Indices | None) -> None:
+        cost = np.inf if chosen is None else float(problem.cost[chosen].sum())
+        history.append((time.monotonic() - began, bound, cost))
+        if progress is not None:
+            progress(bound, cost)
+
+    found = search_pooled(problem, shape, seconds=until - time.monotonic(), rng=rng, tell=tell, stop=stop)
+    step, cost = cost_step(problem.cost), np.inf if found.chosen is None else float(problem.cost[found.chosen].sum())
+    if found.worst_ratio**2 > FEASIBLE:
+        status = "cannot"
+    elif found.chosen is None:
+        status = "rules" if found.bound > most_cost(problem) else "interval"
+    else:
+        status = "proven" if rounded_up(found.bound, step) >= cost * (1.0 - ROUNDING) else "interval"
+    ended = time.monotonic() >= until or (stop is not None and stop())
+    value = arrow_log_det(shape, found.chosen) if found.chosen is not None and problem.interest.all() else np.nan
+    return SearchResult(found.chosen, status, found.bound, found.certificate, value, np.inf, tuple(history),
+                        time.monotonic() - began, status == "interval" and ended,
+                        found.worst_ratio if status == "cannot" else np.nan)
 
 
 @dataclass(frozen=True, slots=True)

@@ -20,6 +20,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from sampler.errors import CertificateError
+from sampler.tasks.pattern_check import pattern_bound
 
 Array = NDArray[np.float64]
 Mask = NDArray[np.bool_]
@@ -71,8 +72,8 @@ class Proven:
 def check_proof(evidence: Evidence, certificate: dict[str, Any]) -> Proven:
     """What the certificate proves. Raises CertificateError, naming the place, when it does not prove what it claims."""
     kind = certificate.get("kind")
-    if kind not in ("tree", "bound", "counting"):
-        raise CertificateError(f'certificate: kind is {kind!r}; allowed are "tree", "bound" and "counting"')
+    if kind not in ("tree", "bound", "counting", "patterns"):
+        raise CertificateError(f'certificate: kind is {kind!r}; allowed are "tree", "bound", "counting" and "patterns"')
     if certificate.get("format") != 1:
         raise CertificateError(f"certificate: format is {certificate.get('format')!r}; this program reads format 1")
     if certificate.get("candidates") != len(evidence.blocks):
@@ -81,6 +82,8 @@ def check_proof(evidence: Evidence, certificate: dict[str, Any]) -> Proven:
     try:
         if kind == "counting":
             return _counting(evidence, certificate)
+        if kind == "patterns":
+            return _patterns(evidence, certificate)
         with np.errstate(over="ignore", invalid="ignore"):  # what overflows is infinite or no number, and closes nothing
             return _Walk(evidence, certificate).run()
     except (KeyError, TypeError, ValueError, IndexError, OverflowError) as error:
@@ -108,6 +111,15 @@ def _counting(evidence: Evidence, certificate: dict[str, Any]) -> Proven:
     if not (cost * (1 - gamma(least)) > claimed or least > most):
         raise CertificateError(f"certificate: rank needs cost {cost:g}, which does not exclude {claimed:g}")
     return Proven(_next(evidence.cost, claimed), f"counting: {q} unknown directions, at most {each} per site")
+
+
+def _patterns(evidence: Evidence, certificate: dict[str, Any]) -> Proven:
+    claimed = float(certificate["lower_bound"])
+    proven, tried = pattern_bound(evidence.blocks, evidence.prior, evidence.cost, evidence.required, evidence.forbidden,
+                                  evidence.rules, evidence.key, evidence.directions(certificate["rows"]), certificate)
+    if not proven >= claimed - 1e-6 * max(1.0, abs(claimed)):
+        raise CertificateError(f"certificate: the patterns give the bound {proven:.9g}, not {claimed:.9g}")
+    return Proven(proven, f"{tried} sets of sites within cells, all {len(evidence.blocks)} candidates")
 
 
 def _next(cost: Array, excluded: float) -> float:
