@@ -20,6 +20,7 @@ COMMANDS = {
     "characterise": "model, noise, variation and read rates from densely measured pilot panels",
     "fit": "corrections of measured panels, whether each meets its limits, and whether the plan still holds",
     "verify": "an independent check of a plan's claims, on simulated and on pilot panels",
+    "lot": "how many panels of a lot to measure, and at how many sites, for the fewest seconds",
     "completion": "the script that completes commands and options in your shell",
     "budget": "from pad and via to the position limit, and from a plan to the pad it supports",
 }
