@@ -24,8 +24,8 @@ def _draw(result: LotResult) -> Figure:
         axes.plot([choice.sites], [choice.seconds], "o" if choice.groups == 1 else "s", color=style.INK if best else style.FILL,
                   markersize=8 if best else 5)
         sets = f", {choice.groups} sets" if choice.groups > 1 else ""
-        axes.annotate(f"{choice.panels}{sets}", (choice.sites, choice.seconds), (0, (9, -15)[number % 2]), ha="center", textcoords="offset points",
-                      fontsize=style.SMALL_PT, fontweight="bold" if best else "normal")
+        axes.annotate(f"{choice.panels}{sets}", (choice.sites, choice.seconds), (0, (9, -15)[number % 2]), ha="center",
+                      textcoords="offset points", fontsize=style.SMALL_PT, fontweight="bold" if best else "normal")
     if result.forward is not None:
         axes.plot([result.forward.sites], [result.forward.seconds], "D", color=style.ALARM_INK, markersize=6)
         axes.annotate(f"feed-forward: all {result.lot:,}", (result.forward.sites, result.forward.seconds), (-7, -3),

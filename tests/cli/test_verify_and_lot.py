@@ -31,7 +31,8 @@ def folder(tmp_path_factory):
 
 
 def test_a_plan_holds_and_an_altered_one_fails(folder):
-    shown = run("verify", folder / "plan", "--pilot", folder / "pilot.csv", "--panels", 500, "--lacks", 0.3, "--out", folder / "v")
+    shown = run("verify", folder / "plan", "--pilot", folder / "pilot.csv", "--panels", 500, "--lacks", 0.3,
+                "--out", folder / "v")
     assert shown.exit_code == 0, shown.output
     assert shown.output.startswith("The plan held") and len(shown.output.splitlines()) <= 24
     found = json.loads((folder / "v" / "verify.json").read_text(encoding="utf-8"))
