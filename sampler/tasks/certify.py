@@ -107,8 +107,9 @@ def _certify(study: Study, plan: dict[str, Any], certificate: dict[str, Any]) ->
 
 def _sentence(count: int, noun: str, least: int, fewest: bool, proven: Proven) -> str:
     sites = f"1 {noun} meets" if count == 1 else f"{count} {noun}s meet"
+    between = f"{least}" if least == count - 1 else f"{least} to {count - 1}"
     rest = f"no set of fewer does ({proven.how})" if fewest or least >= count else \
-        f"no set of fewer than {least} does ({proven.how}); whether {least} to {count - 1} can is open"
+        f"no set of fewer than {least} does ({proven.how}); whether {between} can is open"
     return f"{sites} every limit, and {rest}."
 
 

@@ -53,7 +53,7 @@ ROUNDS = 12
 """Rounds of adding the worst places between raster points; two or three are usual."""
 SAME_SECONDS = 0.005
 """Seconds that differ by less are written alike."""
-REPAIR_SECONDS = 0.5
+REPAIR_SECONDS, REPAIRS = 0.5, 4
 POLISH_SECONDS, POLISH_SHARE = 1.0, 0.1
 """Swaps for a quicker route take this share of the search's seconds, and at least so many."""
 SECOND_SEARCH = 0.5
@@ -180,19 +180,26 @@ class _Search:
         self.bound = -math.inf
         self.certificate: dict[str, Any] = {}
         self.best: SearchResult | None = None
+        self.pace = math.inf
         self.cost, self.constant = _costs(asked)
 
     def run(self) -> Found:
-        result: SearchResult | None = None
+        last: SearchResult | None = None
         growing = bool(self.asked.rasters)
         for turn in range(ROUNDS):
-            left = max(0.0, self.until - time.monotonic())
+            began = time.monotonic()
+            left = max(0.0, self.until - began)
             share = FIRST_SHARE * left if growing and turn < ROUNDS - 1 else left
             result = search(self._problem(), seconds=share, seed=self.asked.study.search.seed, progress=self.progress,
-                            stop=self.stop, warm=result)
+                            stop=self.stop, warm=last)
+            self.pace = min(self.pace, time.monotonic() - began)
             self._note_bound(result)
             if result.chosen is None:
-                break
+                if result.status != "interval" or self._over():
+                    break
+                growing = False  # its share of the time was too short
+                continue
+            last = result
             missed = self._missed(result.chosen)
             if not missed:
                 self._note_found(result)
@@ -200,9 +207,9 @@ class _Search:
                     break
                 growing = False
             if self._over():
-                if self.best is None:
-                    self._repair(result)
                 break
+        if self.best is None and last is not None:
+            self._repair(last)
         return self._found()
 
     def _stopped(self) -> bool:
@@ -276,12 +283,14 @@ class _Search:
                 worst = max([worst, *((next(after).k_u / limit.maximum) ** 2 for _ in limit.terms)])
         return places, worst if self.asked.units.stops is not None else 0.0
 
-    def _repair(self, result: SearchResult) -> None:
-        """Time is over and the only set misses a limit by a hair: ask once more, shortly, for a little more than the limits."""
-        for _ in range(ROUNDS):
-            result = search(self._problem(), seconds=REPAIR_SECONDS, seed=self.asked.study.search.seed, warm=result)
+    def _repair(self, last: SearchResult) -> None:
+        """Time is over and the only set misses a limit by a hair: ask again, shortly, for a little more than the limits."""
+        for _ in range(REPAIRS):
+            result = search(self._problem(), seconds=max(REPAIR_SECONDS, 1.5 * self.pace), seed=self.asked.study.search.seed,
+                            warm=last)
             if result.chosen is None:
                 return
+            last = result
             if not self._missed(result.chosen):
                 self._note_found(result)
                 return
