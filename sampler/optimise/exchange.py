@@ -45,7 +45,7 @@ NEGLIGIBLE = 0.02
 """A limit whose term of the score was below this before a site is added only falls further: it is taken as it is."""
 WATCHED = 128
 """Limits scored at first; of more limits, those that are nearly reached and some of the others stand for all."""
-REDUCED_COST_CUTS = (0.1, 0.3, np.inf)
+REDUCED_COST_CUTS = (0.3, np.inf, 0.1)
 """Candidates of a start: those whose reduced cost is below this share of an average cost, in turn."""
 POOL_SIZE = 2000
 PATIENCE = 20

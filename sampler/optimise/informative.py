@@ -220,7 +220,7 @@ class _Pools:
         return chosen, reached
 
     def climb(self, gains: Array, chosen: Indices, spread: bool = True) -> Climb:
-        """A climb in a pool of the candidates of greatest gain, of as many others if `spread`, and of the chosen."""
+        """A climb in a pool of the candidates of greatest gain, of some others if `spread`, and of the chosen."""
         problem = self.problem
         size = int(np.clip(POOL_PER_SITE * self.budget / problem.cost.mean(), LEAST_POOL, MOST_POOL))
         allowed = np.flatnonzero(~problem.forbidden)
@@ -230,7 +230,7 @@ class _Pools:
                 keep.append(members[_greatest(gains[members], self.rank[members], size // 4)])
         if spread and len(allowed) > size:
             order = allowed[np.argsort(self.rank[allowed], kind="stable")]
-            keep.append(self.rng.choice(order, min(size, len(order)), replace=False))
+            keep.append(self.rng.choice(order, min(LEAST_POOL, len(order)), replace=False))
         source = pool(self.split, problem, np.concatenate(keep))
         likely = np.maximum(self.weights[source.index], 0.0) + 0.05 * self.budget / max(source.n, 1)
         return Climb(Exchange(self.split, source, self.budget, likely, self.rng, self.clock), problem, self.limited)
