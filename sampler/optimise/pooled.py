@@ -115,12 +115,14 @@ class _Master:
             x, dual = np.array(solution.col_value), np.array(solution.row_dual)
             cells = len(self.patterns)
             y, rules = np.maximum(-dual[self.first_cut:], 0.0), dual[cells:self.first_cut]
+            rules = np.where(np.isfinite(np.where(rules > 0, self.lower, self.upper)), rules, 0.0)
             price = self.question.problem.cost.copy()
             earned = 0.0
             for members, nu, low, high in zip(self.members, rules, self.lower, self.upper, strict=True):
-                nu = nu if np.isfinite(low if nu > 0 else high) else 0.0
-                price -= nu * members
-                earned += float(nu * (low if nu > 0 else high)) if nu else 0.0
+                count = low if nu > 0 else high
+                if np.isfinite(count):
+                    price -= nu * members
+                    earned += float(nu * count)
             value, minima = bound(self.shape, self.patterns, self.rows, y, price)
             if value + earned > best.bound:
                 best = PooledBound(value + earned, self.rows, y, rules, most)

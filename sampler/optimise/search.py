@@ -45,6 +45,8 @@ FIRST_TURN = 0.2
 TURN_GROWTH = 3.0
 """Seconds that exchange, and then the tree, work before the other has its turn, and how they grow. They do not depend on
 the time limit, so a longer search begins with what a shorter one does."""
+LOST_TURN = 4.0
+"""With losses exchange finds soon what it can, and the tree takes its time: its turns are so many times longer."""
 POLISH_SHARE = 0.1
 LEAST_POLISH, LEAST_BOUND = 0.5, 2.0
 """Of the time limit this share is kept for log det; when the proof was quick, so many seconds are spent on raising it, and
@@ -205,6 +207,11 @@ class _Near:
         return cls(sites, replace(parts, blocks=tuple(replace(block, rows=block.rows[sites]) for block in parts.blocks)),
                    subset(problem, sites), relaxed.weights[sites], relaxed.reduced_costs[sites])
 
+    def guided(self, weights: NDArray[np.float64]) -> _Near:
+        """The same with weights (n,) that know of losses and spacing, as the relaxation's do not."""
+        here = weights[self.sites]
+        return replace(self, weights=here, reduced_costs=np.where(here > 0, 0.0, self.reduced_costs))
+
     def outward(self, chosen: Indices) -> Indices:
         return np.sort(self.sites[chosen])
 
@@ -229,12 +236,14 @@ def _close(standing: _Standing, parts: Split, relaxed: Relaxation, near: _Near, 
             near.parts, near.problem, weights=near.weights, reduced_costs=near.reduced_costs,
             upper=None if standing.chosen is None else standing.cost, lower=least, rng=rng.spawn(1)[0],
             deadline=min(until, time.monotonic() + turn), stop=stop,
-            on_found=lambda found: standing.offer(near.outward(found)))
-        left = min(turn, until - time.monotonic())
+            on_found=lambda found, near=near: standing.offer(near.outward(found)))
+        left = min(turn * (LOST_TURN if problem.lost else 1.0), until - time.monotonic())
         asked = least if step is not None else standing.cost * (1.0 - COST_GAP)
         if asked < standing.cost * (1.0 - ROUNDING) and left > pace:
             decision = decide(parts, problem, asked, rows=relaxed.rows, weights=relaxed.weights, stop=stop, seconds=left)
             standing.offer(decision.chosen)
+            if decision.weights is not None and (problem.lost or problem.spacing):
+                near = near.guided(decision.weights)
             if decision.status == "impossible":
                 standing.prove(asked + (step or 0.0), decision.certificate)
                 continue

@@ -68,7 +68,7 @@ PROGRAM_COLUMNS = 250
 class Decision:
     """`status` "possible" (`chosen` sorted indices meet limits and rules), "impossible" (`certificate`), or "open".
 
-    `bound`: what the tree proved is the same either way: no set of cost ≤ count, or nothing.
+    `weights` (n,): those of the root, which know of losses and spacing, when it was not closed.
     """
 
     status: str
@@ -76,6 +76,7 @@ class Decision:
     certificate: dict[str, Any] | None
     nodes: int
     seconds: float
+    weights: Array | None = None
 
 
 @dataclass(slots=True)
@@ -115,6 +116,7 @@ class Tree:
         self.cliques: list[int] = []       # splits of which any set holds at most one site
         self.clique_used: dict[int, int] = {}
         self.most_held = LOST_PROGRAM_ROWS
+        self.root_weights: Array | None = None
         self.anchors: list[int] = []       # splits of clusters, see `_anchor`
         self.pool: list[Row] = []
         self.proof: list[Step] = []
@@ -483,6 +485,9 @@ class Tree:
                 continue
             if isinstance(outcome, np.ndarray):
                 return "possible", outcome
+            if self.nodes == 1:
+                self.root_weights = np.zeros(self.n)
+                self.root_weights[self.order[outcome[0]]] = outcome[1]
             if stop():
                 return "open", None
             self._branch(node, *outcome)
@@ -616,4 +621,4 @@ def decide(split: Split, problem: SiteProblem, count: float, *, rows: RowPool | 
     status, chosen = tree.run(ended, progress)
     if status == "impossible":
         certificate = tree.certificate()
-    return Decision(status, chosen, certificate, tree.nodes, time.monotonic() - started)
+    return Decision(status, chosen, certificate, tree.nodes, time.monotonic() - started, tree.root_weights)
