@@ -81,6 +81,10 @@ class _Standing:
             self.chosen, self.cost = np.sort(chosen), float(self.problem.cost[chosen].sum())
             self._tell()
 
+    def taking(self, near: _Near) -> Callable[[Indices], None]:
+        """Offers sets that are found among nearby sites."""
+        return lambda found: self.offer(near.outward(found))
+
     def _tell(self) -> None:
         self.history.append((time.monotonic() - self.began, self.bound, self.cost))
         if self.progress is not None:
@@ -236,7 +240,7 @@ def _close(standing: _Standing, parts: Split, relaxed: Relaxation, near: _Near, 
             near.parts, near.problem, weights=near.weights, reduced_costs=near.reduced_costs,
             upper=None if standing.chosen is None else standing.cost, lower=least, rng=rng.spawn(1)[0],
             deadline=min(until, time.monotonic() + turn), stop=stop,
-            on_found=lambda found, near=near: standing.offer(near.outward(found)))
+            on_found=standing.taking(near))
         left = min(turn * (LOST_TURN if problem.lost else 1.0), until - time.monotonic())
         asked = least if step is not None else standing.cost * (1.0 - COST_GAP)
         if asked < standing.cost * (1.0 - ROUNDING) and left > pace:
