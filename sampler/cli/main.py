@@ -14,6 +14,7 @@ COMMANDS = {
     "plan": "the fewest sites that meet a study's limits, with proof, map and site list",
     "certify": "proves a plan again, from its study, layout and certificate alone",
     "audit": "what sites that you chose achieve, and how far they are from the fewest",
+    "replan": "the fewest sites on a changed layout, keeping the most of a plan's",
     "report": "one HTML page of a plan, for the review and for the line",
     "start": "a layout and a study, ready to run, from a bare table of marks",
     "bring": "the same from a DXF, GDSII, OASIS, Gerber or Excellon file",

@@ -67,7 +67,7 @@ def _contradict(statements: Sequence[Statement], group: Sequence[int]) -> bool:
     upper = np.concatenate([statements[index].upper for index in group])
     if not len(touched):
         return bool(np.any(lower > 0) or np.any(upper < 0))
-    answer = milp(np.zeros(len(touched)), integrality=np.ones(len(touched)), bounds=Bounds(0, 1),
+    answer = milp(np.zeros(len(touched)), integrality=np.ones(len(touched), np.int64), bounds=Bounds(0, 1),
                   constraints=LinearConstraint(rows[:, touched], lower, upper),
                   options={"time_limit": SECONDS_PER_QUESTION})
     return bool(answer.status == 2)

@@ -155,7 +155,8 @@ def _within_seconds(asked: Question, found: Found, until: float, progress: Progr
 @dataclass(frozen=True, slots=True)
 class Found:
     """`units`: the best set that an audit has confirmed, or None. `bound` is on the search's objective, in sites, stops or
-    seconds; `seconds_bound` on the seconds of any panel, where those stand in the way."""
+    seconds; `seconds_bound` on the seconds of any panel, where those stand in the way. `excluded`: that no set meets limits and
+    rules is proven, not just that none was found."""
 
     units: Indices | None
     bound: float
@@ -165,6 +166,7 @@ class Found:
     interrupted: bool
     seconds_bound: float = math.nan
     too_slow: bool = False
+    excluded: bool = False
 
 
 class _Search:
@@ -181,6 +183,7 @@ class _Search:
         self.certificate: dict[str, Any] = {}
         self.best: SearchResult | None = None
         self.pace = math.inf
+        self.excluded = False
         self.cost, self.constant = _costs(asked)
 
     def run(self) -> Found:
@@ -195,6 +198,7 @@ class _Search:
             self.pace = min(self.pace, time.monotonic() - began)
             self._note_bound(result)
             if result.chosen is None:
+                self.excluded = result.status != "interval" and self.tighten == 1.0
                 if result.status != "interval" or self._over():
                     break
                 growing = False  # its share of the time was too short
@@ -301,7 +305,7 @@ class _Search:
         count_bound = bound if self.cost is None and not fixed else math.nan
         certificate = {} if fixed or self.cost is not None else self.certificate
         if best is None:
-            return Found(None, bound, count_bound, math.nan, certificate, self._stopped())
+            return Found(None, bound, count_bound, math.nan, certificate, self._stopped(), excluded=self.excluded)
         proven = self.cost is None and math.ceil(self.bound - 1e-6) >= self._objective(best)
         return Found(best.chosen, bound, count_bound, best.log_det_bound, certificate, not proven and self._stopped())
 
@@ -327,7 +331,8 @@ def with_floors(audit: Audit, best_possible: Audit) -> Audit:
 def _nothing_found(asked: Question, found: Found, best_possible: Audit, began: float) -> Plan:
     """All candidates together meet the limits, but no set within the rules was found."""
     return Plan(asked.study, asked.candidates, best_possible, "cannot", found.count_bound, found.certificate, math.nan,
-                (_hindrance(asked, found),), asked.study.warnings, time.monotonic() - began, found.interrupted)
+                (_hindrance(asked, found),), asked.study.warnings, time.monotonic() - began, found.interrupted,
+                excluded=found.excluded)
 
 
 def _hindrance(asked: Question, found: Found) -> str:

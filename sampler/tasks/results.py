@@ -142,6 +142,8 @@ class Plan:
     stop_xy_mm: NDArray[np.float64] | None = None
     seconds_at_least: float = math.nan
     chance: MissChance | None = None
+    excluded: bool = False
+    """With status "cannot" though all candidates together would do: that no set obeys the rules is proven."""
 
     @property
     def sites(self) -> Sites:
