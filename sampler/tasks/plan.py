@@ -11,6 +11,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from sampler.errors import InputError
 from sampler.optimise.blocks import split
 from sampler.optimise.informative import d_optimal
 from sampler.optimise.log_det import log_det_bound
@@ -30,6 +31,7 @@ from sampler.tasks.question import (
     achieved,
     everything,
     knowledge_of,
+    limits_achieved,
     problem_of,
     question,
     region_rows,
@@ -76,6 +78,7 @@ def plan(study: Study, *, progress: Progress | None = None, stop: Callable[[], b
     if not best_possible.meets_limits:
         return Plan(study, asked.candidates, best_possible, "cannot", math.nan, {}, math.nan, advise(asked, best_possible),
                     study.warnings, time.monotonic() - began)
+    _needs_sites(asked)
     until = began + study.search.seconds
     found = _Search(asked, until, progress, stop).run() if study.limits else _most_informative(asked, until, stop)
     if found.units is not None and (study.search.objective == "seconds" or study.search.prefer == "time"):
@@ -86,6 +89,17 @@ def plan(study: Study, *, progress: Progress | None = None, stop: Callable[[], b
     if found.units is None:
         return _nothing_found(asked, found, best_possible, began)
     return _plan(asked, found, best_possible, began)
+
+
+def _needs_sites(asked: Question) -> None:
+    """Raises InputError when the priors alone meet every limit and no rule asks for a site: then there is nothing to plan."""
+    study = asked.study
+    if asked.rules.required.any() or np.any(asked.rules.counts.lower > 0) or not study.limits:
+        return
+    nothing = asked.units.visits(np.zeros(0, np.int64))
+    if all(limit.ratio <= MEETS for limit in limits_achieved(asked, knowledge_of(asked, nothing))):
+        raise InputError(f"{study.source.path or study.title}: the priors alone meet every limit, with no mark measured; tighten "
+                         "the limits, or leave the priors out")
 
 
 def _plan(asked: Question, found: Found, best_possible: Audit, began: float) -> Plan:

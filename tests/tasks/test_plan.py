@@ -9,12 +9,13 @@ import numpy as np
 import pytest
 from invented_plans import core_layout
 
+from sampler.errors import InputError
 from sampler.model.basis import Model, ModelTerm
 from sampler.model.terms import FAMILIES
 from sampler.panel.layout import Sites
 from sampler.tasks.plan import plan
 from sampler.tasks.question import achieved, knowledge_of, limits_achieved, question
-from sampler.tasks.study import RegionLimit, Rules, SearchOptions, Study, TermLimit
+from sampler.tasks.study import RegionLimit, Rules, SearchOptions, Study, TermLimit, TermPrior
 from sampler.uncertainty.noise import Noise
 
 AFFINE = Model(tuple(ModelTerm(name) for name in FAMILIES["affine"]))
@@ -163,3 +164,11 @@ def test_visiting_order_is_a_route():
     shuffled = np.abs(np.diff(result.sites.xy_mm[np.argsort(result.sites.id)], axis=0)).max(axis=1)
     assert steps.sum() <= shuffled.sum()
     assert result.route.seconds > 0
+
+
+def test_priors_that_meet_every_limit_leave_nothing_to_plan():
+    study = Study("invented", core_layout(6), AFFINE, Noise((0.3, 0.3)), (RegionLimit("panel", 9.0),),
+                  priors=(TermPrior(FAMILIES["affine"], 0.1),))
+    with pytest.raises(InputError, match="the priors alone meet every limit"):
+        plan(study)
+    assert plan(replace(study, rules=Rules(required=("E-3",)))).sites.id.tolist() == ["E-3"]
