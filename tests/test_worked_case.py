@@ -12,7 +12,8 @@ from click.testing import CliRunner
 from sampler.cli.main import COMMANDS, group
 
 ROOT = Path(__file__).parents[1]
-STEPS = re.findall(r"^   sampler (.*)$", (ROOT / "examples" / "new-product" / "README.md").read_text(encoding="utf-8"), re.MULTILINE)
+README = (ROOT / "examples" / "new-product" / "README.md").read_text(encoding="utf-8")
+STEPS = re.findall(r"^   sampler (.*)$", README, re.MULTILINE)
 
 
 def test_every_step_runs(tmp_path, monkeypatch):

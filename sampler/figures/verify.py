@@ -54,5 +54,6 @@ def _draw(result: Verification) -> Figure:
                    fontweight="normal" if held else "bold", color=style.INK if held else style.ALARM_INK)
     answer = "The plan held" if result.held else "The plan failed"
     panels = "; ticks: single pilot panels" if result.pilot else ""
-    headed(drawn, answer, f"k·u observed on {result.panels:,} simulated panels over k·u claimed; grey: what chance allows{panels}")
+    headed(drawn, answer, f"k·u observed on {result.panels:,} simulated panels over k·u claimed; "
+                          f"grey: what chance allows{panels}")
     return drawn

@@ -213,7 +213,8 @@ def write_results(folder: str | Path, files: Mapping[str, bytes | str], *, must_
     A new folder is built beside its place and then renamed. In a folder that exists, the new files are first written
     and flushed to a folder inside it; then the old result's files (those in `files`, and for a plan or an audit all
     `RESULT_FILES`) move away, the new ones in, and the first of `files` comes last, so that whoever reads it finds all the
-    others. Other files are never touched. A failure puts the old files back; what a killed process left is put right by the next call.
+    others. Other files are never touched. A failure puts the old files back; what a killed process left is put right by
+    the next call.
     Raises InputError when the folder cannot be written.
     """
     target = Path(folder)

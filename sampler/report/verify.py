@@ -9,5 +9,5 @@ def verify_text(summary: str, findings: list[str], notes: tuple[str, ...]) -> st
     """The verdict first, then what was found."""
     lines = sentence(summary)
     for said in (*findings, *(f"Note: {note}" for note in notes[:2])):
-        lines += [line for line in sentence(said, first="  ")[:3]]
+        lines += sentence(said, first="  ")[:3]
     return "\n".join(lines[:HEIGHT])

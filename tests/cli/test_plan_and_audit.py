@@ -158,7 +158,8 @@ def test_not_a_study_file(folder, study, monkeypatch, capsys):
 
 def test_a_wrong_column_of_sites(folder, monkeypatch, capsys):
     (folder / "few.csv").write_text("name\nM00\n")
-    status, _, err = fails(monkeypatch, capsys, "audit", folder / "study.toml", "--sites", folder / "few.csv", "--out", folder / "audit")
+    status, _, err = fails(monkeypatch, capsys, "audit", folder / "study.toml", "--sites", folder / "few.csv", "--out",
+                           folder / "audit")
     assert status == 1
     assert '"id"' in err or "id" in err
 

@@ -95,7 +95,8 @@ def test_the_same_seed_gives_the_same_plan():
 
 
 def test_the_claims_are_those_of_the_audit():
-    study = Study("invented", core_layout(12), AFFINE, Noise((0.3, 0.3)), (RegionLimit("panel", 0.5), TermLimit(("rotation",), 3)))
+    study = Study("invented", core_layout(12), AFFINE, Noise((0.3, 0.3)),
+                  (RegionLimit("panel", 0.5), TermLimit(("rotation",), 3)))
     result = plan(study)
     asked = question(study)
     rows = np.array([int(np.flatnonzero(asked.candidates.sites.id == name)[0]) for name in result.sites.id])
