@@ -122,4 +122,4 @@ def correlated(whitened: Array, ratio: Array, stop: Indices, stops: int) -> Arra
     place = np.arange(len(stop)) - (np.cumsum(count) - count)[stop]
     padded = np.zeros((stops, int(count.max(initial=0)), 2, whitened.shape[2]))
     padded[stop, place] = rows
-    return padded.reshape(stops, -1, whitened.shape[2])
+    return padded.reshape(stops, 2 * padded.shape[1], whitened.shape[2])
