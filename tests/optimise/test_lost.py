@@ -110,7 +110,7 @@ def test_changes_of_the_ratios_after_loss(seed, lost):
 
 
 @pytest.mark.parametrize("lost", [1, 2])
-@pytest.mark.parametrize("seed", range(24))
+@pytest.mark.parametrize("seed", range(16))
 def test_search_and_proof_against_enumeration(seed, lost, monkeypatch):
     monkeypatch.setattr("sampler.optimise.search.LEAST_POLISH", 0.01)
     monkeypatch.setattr("sampler.optimise.search.LEAST_BOUND", 0.01)
@@ -129,7 +129,7 @@ def test_search_and_proof_against_enumeration(seed, lost, monkeypatch):
 
 
 @pytest.mark.parametrize("lost", [1, 2])
-@pytest.mark.parametrize("seed", range(40))
+@pytest.mark.parametrize("seed", range(30))
 def test_every_count_is_decided_as_by_enumeration(seed, lost):
     problem = small_problem(seed, lost=lost)
     cost, _ = cheapest(problem)

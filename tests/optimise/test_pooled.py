@@ -86,7 +86,7 @@ def test_search_and_proof_against_enumeration(seed, whole, monkeypatch):
     problem = cells_problem(seed)
     cost, _ = cheapest(problem)
     told = []
-    found = search_pooled(problem, arrow(problem), seconds=1.0, rng=np.random.default_rng(0),
+    found = search_pooled(problem, arrow(problem), seconds=0.1, rng=np.random.default_rng(0),
                           tell=lambda bound, chosen: told.append(bound))
     assert found.bound <= cost + 1e-9
     if found.worst_ratio > 1 + 1e-9:
@@ -108,7 +108,7 @@ def test_most_are_found_and_proven():
         cost, _ = cheapest(problem)
         if np.isinf(cost):
             continue
-        result = search_pooled(problem, arrow(problem), seconds=0.3, rng=np.random.default_rng(0), tell=lambda *_: None)
+        result = search_pooled(problem, arrow(problem), seconds=0.5, rng=np.random.default_rng(0), tell=lambda *_: None)
         found += 1
         optimal += result.chosen is not None and problem.cost[result.chosen].sum() == cost
         proven += np.ceil(result.bound - 1e-4) == cost
