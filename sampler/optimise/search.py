@@ -48,9 +48,10 @@ the time limit, so a longer search begins with what a shorter one does."""
 LOST_TURN = 4.0
 """With losses exchange finds soon what it can, and the tree takes its time: its turns are so many times longer."""
 POLISH_SHARE = 0.1
-LEAST_POLISH, LEAST_BOUND = 0.5, 2.0
-"""Of the time limit this share is kept for log det; when the proof was quick, so many seconds are spent on raising it, and
-on the bound of it so many or as long as everything before took."""
+LEAST_POLISH, LEAST_BOUND = 5.0, 2.0
+POLISH_STARTS = 12
+"""Of the time limit this share is kept for log det; when the proof was quick, so many seconds are spent at most on raising it,
+from so many starts so that one seed gives one answer, and on the bound of it so many or as long as everything before took."""
 MOST_NEAR, NEARLY_PAID = 20_000, 0.1
 
 
@@ -156,7 +157,7 @@ def _search(problem: SiteProblem, began: float, until: float, rng: np.random.Gen
     now = time.monotonic()
     polished = min(until - pace, now + max(LEAST_POLISH, POLISH_SHARE * (now - began)))
     chosen = near.outward(most_informative(near.parts, near.problem, near.inward(standing.chosen), rng=rng.spawn(1)[0],
-                                           deadline=polished, stop=stop))
+                                           deadline=polished, stop=stop, starts=POLISH_STARTS))
     now, standing.chosen, reach = time.monotonic(), chosen, np.inf
     if until - now >= pace:
         reach = log_det_bound(parts, problem, standing.cost, deadline=min(until, now + max(LEAST_BOUND, now - began))).value
