@@ -69,11 +69,10 @@ def test_losing_more_is_never_better():
 def test_changes_of_the_ratios_after_loss(seed, lost):
     """Adding, dropping and swapping sites, for every lost set, as if worked out anew."""
     rng = np.random.default_rng(seed)
-    problem = grid_problem(4, 1, 9) if seed % 2 else random_problem(seed)
+    made = iter([grid_problem(4, 1, 9)] if seed % 2 else map(random_problem, range(seed, 50_000, 1000)))
+    problem = next(problem for problem in made if pool(split(problem), problem, None).n >= 8 and split(problem).limits)
     parts = split(problem)
     source = pool(parts, problem, None)
-    if source.n < 8 or not parts.limits:
-        pytest.skip("too few sites")
     sites = rng.permutation(source.n)[:6]
     sites = np.concatenate([np.flatnonzero(source.required), sites[~source.required[sites]]])
     limits = np.arange(parts.limits)

@@ -200,8 +200,7 @@ def test_no_site_of_a_small_lost_plan_is_needed_by_hand(made):
     written, _ = result(made, "lost")
     asked = question(RECIPES["lost"])
     rng, count = np.random.default_rng(0), written["n_sites"] - 1
-    if not written["fewest_proven"]:
-        pytest.skip("not proven within the time")
+    assert written["fewest_proven"]
     tau = asked.limits.tau**2
     for _ in range(300):
         rows = rng.choice(asked.n, count, replace=False)
