@@ -10,13 +10,13 @@ import numpy as np
 from numpy.typing import NDArray
 
 from sampler.errors import InputError
-from sampler.model.basis import places
 from sampler.panel.region import inside_region
 from sampler.route.visit import Route, follow, plan_route
+from sampler.tasks.loss import demands
 from sampler.tasks.plan import with_floors
 from sampler.tasks.question import Question, achieved, everything, knowledge_of, question
 from sampler.tasks.results import Audit, Plan, PositionMap
-from sampler.tasks.study import RegionLimit, Source, Study, TermLimit
+from sampler.tasks.study import RegionLimit, Source, Study
 from sampler.tasks.units import Visits
 from sampler.uncertainty.information import RANK_TOLERANCE, Knowledge
 from sampler.uncertainty.position import position_u
@@ -212,7 +212,8 @@ def losses(asked: Question, visits: Visits, audit: Audit, knowledge: Knowledge |
         return Losses(np.zeros(0), np.zeros(0, np.int64))
     knowledge = knowledge_of(asked, visits) if knowledge is None else knowledge
     half = knowledge.vectors[:, knowledge.known] / np.sqrt(knowledge.values[knowledge.known]) / knowledge.scale[:, None]
-    directions, maximum, fixed, owner = _demands(asked)
+    demanded = demands(asked)
+    directions, maximum, fixed, owner = demanded.directions, demanded.maximum, demanded.fixed, demanded.owner
     told, variance = directions @ half, knowledge.variance(directions)
     begins = np.flatnonzero(np.r_[True, owner[1:] != owner[:-1]])
     present = np.array([limit.ratio for limit in audit.limits])
@@ -234,26 +235,6 @@ def losses(asked: Question, visits: Visits, audit: Audit, knowledge: Knowledge |
         ratio[start:start + step] = np.maximum.reduceat(k_u / maximum, begins, axis=1)
     ratio = np.maximum(ratio, present)
     return Losses(ratio.max(axis=1), ratio.argmax(axis=1))
-
-
-def _demands(asked: Question) -> tuple[Array, Array, Array, Indices]:
-    """Directions (L, p), their limits (L,) on k·u, the part (L,) of (k·u)² that no site changes, and whose limit each is."""
-    study, parts, owner = asked.study, [], 0
-    for source, limit in enumerate(study.limits):
-        if isinstance(limit, TermLimit):
-            count = len(limit.terms)
-            columns = [study.model.names.index(name) for name in limit.terms]
-            parts.append((np.eye(asked.assumed.size)[columns], np.full(count, limit.maximum), np.zeros(count),
-                          owner + np.arange(count)))
-            owner += count
-        else:
-            at = asked.rasters[source]
-            rows = asked.assumed.position(places(study.layout, at.xy_mm, at.cell), limit.of).reshape(-1, asked.assumed.size)
-            fixed = (study.coverage_factor * asked.assumed.fixed_um(at.xy_mm, limit.of).ravel()) ** 2
-            parts.append((rows, np.full(len(rows), limit.position_um), fixed, np.full(len(rows), owner)))
-            owner += 1
-    directions, maximum, fixed, whose = (np.concatenate([part[k] for part in parts]) for k in range(4))
-    return directions, maximum, fixed, whose
 
 
 def _alone(asked: Question, visits: Visits) -> Array:
