@@ -14,7 +14,8 @@ from numpy.typing import NDArray
 from sampler.errors import InputError
 from sampler.optimise.blocks import split
 from sampler.optimise.informative import d_optimal
-from sampler.optimise.log_det import log_det_bound
+from sampler.optimise.log_det import log_det, log_det_bound
+from sampler.optimise.log_det_tree import branched_log_det_bound
 from sampler.optimise.lost import ratios_after_loss
 from sampler.optimise.problem import SearchResult, SiteProblem
 from sampler.optimise.search import search
@@ -60,6 +61,8 @@ POLISH_SECONDS, POLISH_SHARE = 1.0, 0.1
 """Swaps for a quicker route take this share of the search's seconds, and at least so many."""
 SECOND_SEARCH = 0.5
 """Share of the search's seconds for the search for a quick panel, when that of the fewest sites is too slow."""
+CLOSE_LOG_DET = 1e-3
+"""The bound on log det of a given number of sites is branched on until it is this close, or time ends."""
 TIGHTER = 0.999
 """Asked of the next search beyond the ratio by which marks shared between stops made the last one miss."""
 
@@ -134,6 +137,11 @@ def _most_informative(asked: Question, until: float, stop: Callable[[], bool] | 
     parts = split(problem)
     chosen = d_optimal(parts, problem, count, rng=np.random.default_rng(asked.study.search.seed), deadline=until, stop=stop)
     reach = log_det_bound(parts, problem, count, limited=False, deadline=max(until, time.monotonic() + POLISH_SECONDS)).value
+    if chosen is not None:
+        attained = log_det(parts, problem, chosen)
+        branched = branched_log_det_bound(parts, problem, count, attained=attained, gap=CLOSE_LOG_DET, limited=False,
+                                          deadline=until, stop=stop)
+        reach = min(reach, branched.value)
     return Found(chosen, math.nan, math.nan, reach, {}, stop is not None and stop())
 
 
