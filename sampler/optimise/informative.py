@@ -176,6 +176,7 @@ def _best_set(split: Split, problem: SiteProblem, budget: float, limited: bool, 
             climb = pools.climb(peak.gains, best.sites)
         choice = climb.start(bool(rng.uniform() < UNIFORM))
         if choice is None and len(best.sites):
+            climb = pools.climb(peak.gains, best.sites)  # the pool at hand may be older than the best set
             choice = Choice(climb.exchange.pool, climb.exchange.pool.places(best.sites))
         if choice is None:
             continue

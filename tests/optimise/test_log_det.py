@@ -360,3 +360,31 @@ def test_value_without_offset_is_that_of_the_blocks():
     parts = split(problem)
     chosen = np.arange(0, 16, 2)
     assert value(determinants(parts, problem), chosen) + offset(parts, problem) == pytest.approx(textbook(problem, chosen))
+
+
+def test_a_start_without_a_choice_goes_on_from_the_best_set(monkeypatch):
+    """The best set may hold sites that the pool at hand, made before it was found, does not."""
+    from sampler.optimise import informative
+
+    begin, calls = informative.Climb.start, []
+
+    def sometimes(climb, uniform):
+        calls.append(uniform)
+        return None if len(calls) % 2 == 0 else begin(climb, uniform)
+
+    monkeypatch.setattr(informative.Climb, "start", sometimes)
+    monkeypatch.setattr(informative, "SAME_POOL", 1000)
+    monkeypatch.setattr(informative, "LEAST_POOL", 12)
+    monkeypatch.setattr(informative, "MOST_POOL", 24)
+    monkeypatch.setattr(informative, "POOL_PER_SITE", 1)
+    x, y = np.meshgrid(np.linspace(-1, 1, 40), np.linspace(-1, 1, 40))
+    x, y = x.ravel(), y.ravel()
+    blocks = np.stack([np.ones(1600), x, y, x * x, x * y, y * y], axis=1)[:, None]
+    problem = site_problem(blocks, np.eye(6), np.full(6, 5.0))
+    parts = split(problem)
+    for seed in range(6):
+        first = np.sort(np.random.default_rng(seed).permutation(1600)[:14])
+        found = informative.most_informative(parts, problem, first, rng=np.random.default_rng(seed), starts=12)
+        assert len(found) == 14
+        assert log_det(parts, problem, found) >= log_det(parts, problem, first)
+    assert len(calls) > 12
