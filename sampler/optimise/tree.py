@@ -604,7 +604,7 @@ def _pool_row(split: Split, rows: RowPool, index: int) -> Row:
 
 def decide(split: Split, problem: SiteProblem, count: float, *, rows: RowPool | None = None, weights: Array | None = None,
            seconds: float = np.inf, stop: Callable[[], bool] | None = None,
-           progress: Callable[[float, float], None] | None = None, processes: int = 1) -> Decision:
+           progress: Callable[[float, float], None] | None = None) -> Decision:
     """Whether sites of total cost ≤ count meet every limit and rule: found, proven impossible, or open when time ends.
 
     `rows` and `weights` (n,) of a relaxation start the tree warm. `progress(count, inf)` is a sign of life.
