@@ -1,4 +1,4 @@
-"""A folder of results read back for its report page: the plan's claims, the trade-off and the verification beside it."""
+"""A folder of results read back for its report page: the plan's claims and the verification beside it."""
 
 from __future__ import annotations
 
@@ -11,10 +11,10 @@ from sampler.errors import InputError
 from sampler.files.faults import Faults
 from sampler.files.plan import PlanFile
 from sampler.files.source import read_bytes, shown_path
-from sampler.tasks.review import Claims, TradeOffPoint, Verdict
+from sampler.tasks.review import Claims, Verdict
 from sampler.tasks.study import Study
 
-TRADE_OFF, VERIFICATION = "tradeoff.json", "verify.json"
+VERIFICATION = "verify.json"
 
 
 def claims_of(plan: PlanFile, study: Study) -> Claims:
@@ -36,20 +36,15 @@ def _number(value: Any) -> float:
     return math.nan if value is None else float(value)
 
 
-def read_beside(folder: str | Path) -> tuple[tuple[TradeOffPoint, ...], Verdict | None]:
-    """The trade-off's points and the verification's verdict in a folder, as far as they are there."""
-    points: tuple[TradeOffPoint, ...] = ()
-    verdict = None
+def read_verdict(folder: str | Path) -> Verdict | None:
+    """What `verify` said of the plan in a folder, if it did."""
     try:
-        if (trade_off := _optional(Path(folder) / TRADE_OFF)) is not None:
-            points = tuple(TradeOffPoint(tuple(point["ids"]), _number(point["ratio_at_least"]))
-                           for point in trade_off["curves"][0]["points"] if point["ids"])
         if (verification := _optional(Path(folder) / VERIFICATION)) is not None:
-            verdict = Verdict(bool(verification["held"]), str(verification["summary"]), tuple(verification["findings"]))
-    except (KeyError, TypeError, ValueError, AttributeError, IndexError) as error:
-        raise InputError(f"{shown_path(Path(folder))}: {TRADE_OFF} or {VERIFICATION} is damaged, {type(error).__name__}: "
-                         f"{error}; make it again or remove it") from error
-    return points, verdict
+            return Verdict(bool(verification["held"]), str(verification["summary"]), tuple(verification["findings"]))
+    except (KeyError, TypeError, ValueError, AttributeError) as error:
+        raise InputError(f"{shown_path(Path(folder) / VERIFICATION)}: damaged, {type(error).__name__}: {error}; verify again or "
+                         "remove it") from error
+    return None
 
 
 def _optional(path: Path) -> Any:
